@@ -5,7 +5,9 @@ use schemars::JsonSchema;
 use serde::{Deserialize, Serialize};
 
 /// Why a quantity is not given.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Serialize, Deserialize, JsonSchema)]
+#[derive(
+    Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Serialize, Deserialize, JsonSchema,
+)]
 #[serde(rename_all = "kebab-case")]
 pub enum Because {
     /// The beam is neither given nor visible in the noise.
@@ -46,6 +48,8 @@ pub enum Because {
     NoNoiseEstimate,
     /// Fewer features than the quantity needs.
     TooFewFeatures,
+    /// The file could not be read.
+    NotRead,
     /// This version does not measure it yet.
     NotImplemented,
 }

@@ -1,0 +1,220 @@
+//! The flags of every command. Those of the map description come from its table of keys, so
+//! that flag, file key and schema cannot drift apart.
+
+use std::ffi::OsString;
+use std::path::PathBuf;
+
+use clap::builder::PossibleValuesParser;
+use clap::{Arg, ArgAction, ArgMatches, Command, value_parser};
+
+use crate::map::description::{DESCRIPTION_KEYS, ValueKind};
+use crate::physics::{Cosmology, Flow};
+use crate::settings::Settings;
+
+const MEASURE_HELP: &str = "\
+A map is an array or image file: .npy, PNG (8 or 16 bit gray) or a text grid of numbers, \
+recognised by its content. What the file cannot say (pixel scale, beam, unit, orientation, \
+host, redshift) is its description. Four layers give it, each over the one before: \
+--defaults FILE, a row of --manifest FILE, the file beside the map (NAME.map.json for \
+NAME.npy), and flags. All of it is optional: what is missing makes the quantities that need \
+it missing, with the reason.";
+
+const MEASURE_EXAMPLES: &str = "\
+Examples:
+  One map, its description beside it, table on the screen:
+    jetspan measure cluster.npy
+  A map described by flags, record to standard output:
+    jetspan measure field.png --pixel-scale-arcsec 1.5 --beam-major-arcsec 5 \\
+        --unit mJy/beam --value-scale 0.02 --redshift 0.12 --json -
+  All maps of a manifest, one record a line:
+    jetspan measure --manifest maps.csv --json records.jsonl
+
+Exit status: 0 all maps measured (also where nothing was found), 1 some map failed,
+2 the call was wrong or its output could not be written.";
+
+/// The whole command line.
+pub fn command() -> Command {
+    Command::new("jetspan")
+        .version(env!("CARGO_PKG_VERSION"))
+        .about("Measures the jets of active galaxies on radio maps held as plain arrays or images")
+        .subcommand_required(true)
+        .arg_required_else_help(true)
+        .disable_help_subcommand(true)
+        .subcommand(measure_command())
+        .subcommand(
+            Command::new("explain")
+                .about("Says what a quantity of the record means, with unit, formula and source")
+                .arg(
+                    Arg::new("KEY")
+                        .help("path such as sides[0].length_arcsec, or its end; none: list all"),
+                ),
+        )
+        .subcommand(
+            Command::new("schema")
+                .about("Prints the JSON schema of a record or of a map description")
+                .arg(
+                    Arg::new("OF")
+                        .required(true)
+                        .value_parser(PossibleValuesParser::new(["record", "description"]))
+                        .help("which schema"),
+                ),
+        )
+}
+
+fn measure_command() -> Command {
+    let defaults = Settings::default();
+    let file = |id: &'static str, help: &'static str, long: &'static str| {
+        Arg::new(id)
+            .long(id)
+            .value_name("FILE")
+            .value_parser(value_parser!(PathBuf))
+            .help(help)
+            .long_help(long)
+    };
+    let mut command = Command::new("measure")
+        .about("Measures one or more maps: a table on the screen, a record as JSON")
+        .long_about(MEASURE_HELP)
+        .after_long_help(MEASURE_EXAMPLES)
+        .arg(
+            Arg::new("MAP")
+                .num_args(0..)
+                .value_parser(value_parser!(PathBuf))
+                .help("map files; none: all maps of the manifest"),
+        )
+        .next_help_heading("Input and output")
+        .arg(file("defaults", "description for all maps (JSON object)", "A JSON object with description keys that hold for all maps: the lowest layer."))
+        .arg(file("manifest", "table with a row of description per map", "CSV with a header, or JSON Lines. Column `file` names the map, relative to the manifest; every other column is a description key. An empty cell means not given."))
+        .arg(file("json", "write records here; - for standard output", "One map: one JSON object. Several maps: JSON Lines, one record a line, failed maps too. With - there is no table. The file appears whole or not at all."));
+    command = command
+        .next_help_heading("Detection")
+        .arg(number(
+            "detection-sigma",
+            "SIGMA",
+            "peak a region must reach",
+            "In local rms. Lower it to look for faint sources and expect false ones.",
+            defaults.detection_sigma,
+        ))
+        .arg(number(
+            "outline-sigma",
+            "SIGMA",
+            "level down to which a region is followed",
+            "In local rms; also the lowest contour for sizes.",
+            defaults.outline_sigma,
+        ));
+    command = command
+        .next_help_heading("Brightness ratio")
+        .arg(number("confidence", "SHARE", "one-sided confidence of limits", "Limits hold at least this often.", defaults.confidence))
+        .arg(number("ratio-value-sigma", "SIGMA", "both strips above this: a value, else a limit", "Signal-to-noise that both strip fluxes need for the jet to counter-jet ratio to be given as a value.", defaults.ratio_value_sigma))
+        .arg(number("sidedness-sigma", "SIGMA", "difference that makes a side the jet", "Difference of the two strip fluxes over its error from which the roles jet and counter-jet are given; below, the sides are called first and second.", defaults.sidedness_sigma))
+        .arg(number("strip-inner-beams", "BEAMS", "inner end of the strips", "In beam majors from the core. The core's own beam has fallen to 2^-16 at 2.", defaults.strip_inner_beams))
+        .arg(number("strip-half-width-beams", "BEAMS", "half width of the strips", "In projected beam widths; wider where the jet is resolved.", defaults.strip_half_width_beams))
+        .arg(number("follow-ridge-sigma", "SIGMA", "ridge strength from which the counter-jet's is followed", "Below it the counter-jet's strip is the jet's turned by 180 degrees: a strip that follows noise would be biased.", defaults.follow_ridge_sigma));
+    command = command
+        .next_help_heading("Physics")
+        .arg(
+            Arg::new("flow")
+                .long("flow")
+                .value_name("KIND")
+                .value_parser(PossibleValuesParser::new(["continuous", "blob"]))
+                .default_value("continuous")
+                .help("exponent of the boost: continuous 2+a, blob 3+a")
+                .long_help("A continuous jet is boosted with exponent 2 + spectral index, a single blob with 3 + spectral index. The other is always given beside it."),
+        )
+        .arg(number("hubble-km-s-mpc", "H0", "Hubble constant", "In km/s/Mpc.", defaults.cosmology.hubble_km_s_mpc))
+        .arg(number("omega-matter", "OM", "matter density", "Today, over the critical density. Old papers: twice their q0, with --omega-lambda 0.", defaults.cosmology.omega_matter))
+        .arg(number("omega-lambda", "OL", "dark energy density", "Today, over the critical density; curvature makes up the rest.", defaults.cosmology.omega_lambda));
+    for key in DESCRIPTION_KEYS {
+        let mut arg = Arg::new(key.name)
+            .long(key.name.replace('_', "-"))
+            .value_name(key.value_name)
+            .help(key.help)
+            .help_heading(key.group)
+            .allow_hyphen_values(true)
+            .action(ArgAction::Set);
+        if let ValueKind::Choice(words) = key.kind {
+            arg = arg.value_parser(PossibleValuesParser::new(words.iter().copied()));
+        }
+        command = command.arg(arg);
+    }
+    command
+}
+
+fn number(
+    id: &'static str,
+    value_name: &'static str,
+    help: &'static str,
+    long: &'static str,
+    default: f64,
+) -> Arg {
+    Arg::new(id)
+        .long(id)
+        .value_name(value_name)
+        .value_parser(value_parser!(f64))
+        .allow_negative_numbers(true)
+        .help(format!("{help} [{default}]"))
+        .long_help(format!("{}. {long} Default {default}.", capitalised(help)))
+}
+
+fn capitalised(text: &str) -> String {
+    let mut chars = text.chars();
+    chars.next().map_or(String::new(), |first| first.to_uppercase().chain(chars).collect())
+}
+
+/// Settings from the flags, over the defaults.
+pub fn settings(matches: &ArgMatches) -> Result<Settings, super::CliError> {
+    let defaults = Settings::default();
+    let get = |id: &str, default: f64| matches.get_one::<f64>(id).copied().unwrap_or(default);
+    let flow = match matches.get_one::<String>("flow").map(String::as_str) {
+        Some("blob") => Flow::Blob,
+        _ => Flow::Continuous,
+    };
+    let settings = Settings {
+        detection_sigma: get("detection-sigma", defaults.detection_sigma),
+        outline_sigma: get("outline-sigma", defaults.outline_sigma),
+        confidence: get("confidence", defaults.confidence),
+        ratio_value_sigma: get("ratio-value-sigma", defaults.ratio_value_sigma),
+        sidedness_sigma: get("sidedness-sigma", defaults.sidedness_sigma),
+        strip_inner_beams: get("strip-inner-beams", defaults.strip_inner_beams),
+        strip_half_width_beams: get("strip-half-width-beams", defaults.strip_half_width_beams),
+        follow_ridge_sigma: get("follow-ridge-sigma", defaults.follow_ridge_sigma),
+        flow,
+        cosmology: Cosmology::new(
+            get("hubble-km-s-mpc", defaults.cosmology.hubble_km_s_mpc),
+            get("omega-matter", defaults.cosmology.omega_matter),
+            get("omega-lambda", defaults.cosmology.omega_lambda),
+        )?,
+    };
+    settings.check()?;
+    Ok(settings)
+}
+
+/// Description keys given as flags.
+pub fn description_flags(matches: &ArgMatches) -> Vec<(&'static str, String)> {
+    DESCRIPTION_KEYS
+        .iter()
+        .filter_map(|key| {
+            let mut raw = matches.try_get_raw(key.name).ok().flatten()?;
+            let text: OsString = raw.next()?.to_os_string();
+            Some((key.name, text.to_string_lossy().into_owned()))
+        })
+        .collect()
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn every_flag_has_one_line_of_help_within_eighty_columns() {
+        // Parsing tables are checked by clap itself.
+        command().debug_assert();
+        let mut measure = measure_command().term_width(80);
+        let short = measure.render_help().to_string();
+        for line in short.lines() {
+            assert!(line.chars().count() <= 80, "{line}");
+        }
+        for key in DESCRIPTION_KEYS {
+            assert!(short.contains(&format!("--{}", key.name.replace('_', "-"))), "{}", key.name);
+        }
+    }
+}

@@ -1,0 +1,74 @@
+//! The command line: flags as typed, files opened, results written. The only part that
+//! touches files and the terminal beside `map/read` and `write`.
+
+mod args;
+mod explain;
+mod measure;
+mod messages;
+
+use std::ffi::OsString;
+use std::process::ExitCode;
+
+use crate::record::Record;
+
+/// All maps measured (also where nothing was found on them).
+const ALL_MEASURED: u8 = 0;
+/// Some map failed; its record says why.
+const SOME_FAILED: u8 = 1;
+/// The call could not be understood, or its output not be written.
+const USAGE: u8 = 2;
+
+/// Runs one call of the program and says how it ended.
+pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
+    let matches = match args::command().try_get_matches_from(arguments) {
+        Ok(matches) => matches,
+        Err(error) => {
+            let code = if error.use_stderr() { USAGE } else { ALL_MEASURED };
+            // A closed pipe is no reason to complain.
+            let _ = error.print();
+            return ExitCode::from(code);
+        }
+    };
+    let outcome = match matches.subcommand() {
+        Some(("measure", matches)) => measure::run(matches),
+        Some(("explain", matches)) => explain::run(matches),
+        Some(("schema", matches)) => schema(matches),
+        _ => Ok(ALL_MEASURED),
+    };
+    match outcome {
+        Ok(code) => ExitCode::from(code),
+        Err(error) => {
+            messages::error(&error.to_string());
+            ExitCode::from(USAGE)
+        }
+    }
+}
+
+/// Why a call ended without its result.
+#[derive(Debug, thiserror::Error)]
+enum CliError {
+    #[error(transparent)]
+    Description(#[from] crate::map::description::DescriptionError),
+    #[error(transparent)]
+    Settings(#[from] crate::settings::SettingsError),
+    #[error(transparent)]
+    Cosmology(#[from] crate::physics::CosmologyError),
+    #[error(transparent)]
+    Write(#[from] crate::write::WriteError),
+    #[error(
+        "no map named and no --manifest; name at least one map file, such as `jetspan measure MAP`"
+    )]
+    NoMap,
+    #[error("no quantity is called `{found}`{near}; `jetspan explain` lists all")]
+    UnknownQuantity { found: String, near: String },
+}
+
+fn schema(matches: &clap::ArgMatches) -> Result<u8, CliError> {
+    let schema = match matches.get_one::<String>("OF").map(String::as_str) {
+        Some("description") => crate::map::description::description_schema(),
+        _ => Record::schema(),
+    };
+    let text = serde_json::to_string_pretty(&schema).unwrap_or_default();
+    crate::write::print(&format!("{text}\n"))?;
+    Ok(ALL_MEASURED)
+}

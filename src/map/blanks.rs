@@ -1,0 +1,353 @@
+//! Blank regions, clipped floors and saturated plateaus that nobody told us about, found in
+//! the stored values.
+//!
+//! Blank regions are often filled with one value, mostly zero. In floating-point data a
+//! connected block of identical values cannot be noise. It need not be blank, though: a map
+//! clipped from below has its floor there, and a saturated one its ceiling.
+
+/// Pixels a block of identical values needs before it counts.
+const MIN_BLOCK_PIXELS: usize = 64;
+/// Columns and rows it must span.
+const MIN_BLOCK_SPAN: usize = 8;
+/// Fraction of the map that must equal its minimum before it is called clipped: 2 % is
+/// Gaussian noise clipped at −2σ.
+const MIN_CLIPPED_FRACTION: f64 = 0.02;
+/// Beyond this fraction a floor is a floor even where the next brightness is far above it:
+/// the map was masked by a threshold, and what is left is the source.
+const MASKED_FRACTION: f64 = 0.5;
+/// Most different fill values looked for.
+const MAX_FILL_VALUES: usize = 32;
+/// Most neighbours of the floor whose heights above it are compared.
+const MAX_GAPS: usize = 100_000;
+
+/// What the stored values say about themselves.
+#[derive(Clone, Debug, Default, PartialEq)]
+pub(super) struct Findings {
+    /// Values that fill blank regions.
+    pub fill_values: Vec<f64>,
+    /// Stored value below which the map was clipped.
+    pub clipped_floor: Option<f64>,
+    /// Pixels of connected plateaus at the map's maximum.
+    pub plateau_pixels: usize,
+}
+
+/// The extremes of the map and how often they occur.
+struct Extremes {
+    lowest: f64,
+    lowest_count: usize,
+    second_lowest: f64,
+    second_lowest_count: usize,
+    highest: f64,
+    second_highest: f64,
+    finite: usize,
+}
+
+impl Extremes {
+    /// `None` where there are fewer than two different values.
+    fn of(stored: &[f64]) -> Option<Self> {
+        let finite = || stored.iter().copied().filter(|v| v.is_finite());
+        let lowest = finite().reduce(f64::min)?;
+        let highest = finite().reduce(f64::max)?;
+        let second_lowest = finite().filter(|&v| v > lowest).reduce(f64::min)?;
+        let second_highest = finite().filter(|&v| v < highest).reduce(f64::max)?;
+        let count = |value: f64| finite().filter(|v| v.total_cmp(&value).is_eq()).count();
+        Some(Self {
+            lowest,
+            lowest_count: count(lowest),
+            second_lowest,
+            second_lowest_count: count(second_lowest),
+            highest,
+            second_highest,
+            finite: finite().count(),
+        })
+    }
+
+    fn has_low_outlier(&self) -> bool {
+        self.second_lowest - self.lowest > self.highest - self.second_lowest
+    }
+
+    fn has_high_outlier(&self) -> bool {
+        self.highest - self.second_highest > self.second_highest - self.lowest
+    }
+}
+
+/// Looks for fill values, a clipped floor and plateaus. Blanks already known are NaN, zeros
+/// have no sign. `step` is the quantisation step of the stored values, 0 if there is none;
+/// whole numbers (`is_integer`) have identical neighbours anyway and are not searched for
+/// blocks.
+pub(super) fn inspect(stored: &[f64], columns: usize, step: f64, is_integer: bool) -> Findings {
+    let mut findings = Findings::default();
+    let Some(extremes) = Extremes::of(stored) else {
+        return findings;
+    };
+    findings.clipped_floor = clipped_floor(stored, columns, step, &extremes);
+    let fraction = extremes.lowest_count as f64 / extremes.finite as f64;
+    let is_masked = findings.clipped_floor.is_some() && fraction > MASKED_FRACTION;
+    // Without noise, identical values say nothing about blanks.
+    if is_integer || is_masked {
+        return findings;
+    }
+    let mut refused: Vec<f64> = Vec::new();
+    for block in blocks(stored, columns) {
+        let value = block.value;
+        let same = |other: &f64| other.total_cmp(&value).is_eq();
+        if same(&extremes.highest) && !extremes.has_high_outlier() {
+            findings.plateau_pixels += block.pixels;
+            continue;
+        }
+        let is_floor = same(&extremes.lowest) && findings.clipped_floor.is_some();
+        let known = findings.fill_values.iter().chain(&refused).any(|v| same(v));
+        if is_floor || known || findings.fill_values.len() + refused.len() >= MAX_FILL_VALUES {
+            continue;
+        }
+        if step > 0.0 && !stands_out(stored, value, step) {
+            refused.push(value);
+        } else {
+            findings.fill_values.push(value);
+        }
+    }
+    findings
+}
+
+/// Whether a level of quantised values holds far more pixels than its two neighbours.
+fn stands_out(stored: &[f64], value: f64, step: f64) -> bool {
+    let (mut own, mut below, mut above) = (0usize, 0usize, 0usize);
+    for &v in stored {
+        let levels = (v - value) / step;
+        if levels.abs() < 0.5 {
+            own += 1;
+        } else if (0.5..1.5).contains(&levels) {
+            above += 1;
+        } else if levels < 0.0 && levels > -1.5 {
+            below += 1;
+        }
+    }
+    own > 5 * below.max(above)
+}
+
+/// The floor of a clipped map, if it is one.
+///
+/// Three things tell a floor from a fill value: it is the minimum, it is frequent, and the
+/// brightness beside it begins right above it (or hardly anything else is left).
+fn clipped_floor(stored: &[f64], columns: usize, step: f64, extremes: &Extremes) -> Option<f64> {
+    let fraction = extremes.lowest_count as f64 / extremes.finite as f64;
+    let is_frequent = fraction > MIN_CLIPPED_FRACTION
+        && extremes.lowest_count >= MIN_BLOCK_PIXELS
+        && extremes.lowest_count > extremes.second_lowest_count;
+    if !is_frequent || extremes.has_low_outlier() {
+        return None;
+    }
+    let next_level = step > 0.0 && extremes.second_lowest - extremes.lowest <= 1.5 * step;
+    if next_level || begins_at_floor(stored, columns, extremes.lowest) {
+        Some(extremes.lowest)
+    } else if fraction > MASKED_FRACTION {
+        Some(extremes.second_lowest)
+    } else {
+        None
+    }
+}
+
+/// Whether the heights of the floor's neighbours above it go down to nothing: their lowest
+/// tenth lies below 0.3 of their median (0.19 for Gaussian noise cut at its mean, 0.15 for
+/// an exponential, 1 for a step).
+fn begins_at_floor(stored: &[f64], columns: usize, floor: f64) -> bool {
+    let mut gaps = Vec::new();
+    let mut compare = |a: f64, b: f64| {
+        let (low, high) = (a.min(b), a.max(b));
+        if low.total_cmp(&floor).is_eq() && high > floor && gaps.len() < MAX_GAPS {
+            gaps.push(high - floor);
+        }
+    };
+    for row in stored.chunks(columns.max(1)) {
+        for pair in row.windows(2) {
+            if let &[a, b] = pair {
+                compare(a, b);
+            }
+        }
+    }
+    for (&a, &b) in stored.iter().zip(stored.iter().skip(columns)) {
+        compare(a, b);
+    }
+    gaps.sort_by(f64::total_cmp);
+    match (gaps.get(gaps.len() / 10), gaps.get(gaps.len() / 2)) {
+        (Some(tenth), Some(median)) => *tenth < 0.3 * median,
+        _ => false,
+    }
+}
+
+struct Block {
+    value: f64,
+    pixels: usize,
+}
+
+/// Connected (by sides) blocks of identical values that are large enough.
+fn blocks(stored: &[f64], columns: usize) -> Vec<Block> {
+    let mut found = Vec::new();
+    if columns < MIN_BLOCK_SPAN {
+        return found;
+    }
+    let mut seen = vec![false; stored.len()];
+    let mut open = Vec::new();
+    for (start, &value) in stored.iter().enumerate() {
+        let begins = |i: usize| stored.get(i).is_some_and(|v| v.total_cmp(&value).is_eq());
+        if !value.is_finite() || seen.get(start) != Some(&false) {
+            continue;
+        }
+        if !begins(start + 1) && !begins(start + columns) {
+            continue;
+        }
+        let (mut pixels, mut left, mut right) = (0usize, usize::MAX, 0usize);
+        let mut bottom = start / columns;
+        if let Some(mark) = seen.get_mut(start) {
+            *mark = true;
+        }
+        open.push(start);
+        while let Some(at) = open.pop() {
+            let (row, column) = (at / columns, at % columns);
+            pixels += 1;
+            left = left.min(column);
+            right = right.max(column);
+            bottom = bottom.max(row);
+            let neighbours = [
+                (column > 0).then(|| at - 1),
+                (column + 1 < columns).then_some(at + 1),
+                at.checked_sub(columns),
+                Some(at + columns),
+            ];
+            for next in neighbours.into_iter().flatten() {
+                if begins(next) {
+                    if let Some(mark) = seen.get_mut(next).filter(|mark| !**mark) {
+                        *mark = true;
+                        open.push(next);
+                    }
+                }
+            }
+        }
+        let height = bottom + 1 - start / columns;
+        if pixels >= MIN_BLOCK_PIXELS
+            && right + 1 - left >= MIN_BLOCK_SPAN
+            && height >= MIN_BLOCK_SPAN
+        {
+            found.push(Block { value, pixels });
+        }
+    }
+    found
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use rand::{RngExt, SeedableRng};
+
+    const SIDE: usize = 128;
+
+    /// Noise of standard deviation 1 (sum of twelve uniform numbers).
+    fn noise() -> Vec<f64> {
+        let mut random = rand_pcg::Pcg64Mcg::seed_from_u64(7);
+        (0..SIDE * SIDE)
+            .map(|_| (0..12).map(|_| random.random::<f64>()).sum::<f64>() - 6.0)
+            .collect()
+    }
+
+    /// Mean of 5 × 5 neighbours: noise with a beam.
+    fn smooth_noise() -> Vec<f64> {
+        let rough = noise();
+        let at = |x: usize, y: usize| rough[(y % SIDE) * SIDE + x % SIDE];
+        (0..SIDE * SIDE)
+            .map(|i| (0..25).map(|k| at(i % SIDE + k % 5, i / SIDE + k / 5)).sum::<f64>() / 5.0)
+            .collect()
+    }
+
+    fn outside_circle(i: usize) -> bool {
+        let middle = (SIDE as f64 - 1.0) / 2.0;
+        ((i % SIDE) as f64 - middle).hypot((i / SIDE) as f64 - middle) > SIDE as f64 / 2.0
+    }
+
+    #[test]
+    fn plain_noise_has_nothing_to_report() {
+        assert_eq!(inspect(&noise(), SIDE, 0.0, false), Findings::default());
+        assert_eq!(inspect(&smooth_noise(), SIDE, 0.0, false), Findings::default());
+        assert_eq!(inspect(&[1.0; 400], 20, 0.0, false), Findings::default());
+        assert_eq!(inspect(&[], 0, 0.0, false), Findings::default());
+    }
+
+    #[test]
+    fn corners_filled_with_one_value_are_blank() {
+        for fill in [0.0, -9999.0, 1e30, 0.25] {
+            for map in [noise(), smooth_noise()] {
+                let filled: Vec<f64> =
+                    (0..map.len()).map(|i| if outside_circle(i) { fill } else { map[i] }).collect();
+                let got = inspect(&filled, SIDE, 0.0, false);
+                assert_eq!(got.fill_values, [fill]);
+                assert_eq!((got.clipped_floor, got.plateau_pixels), (None, 0), "{fill}");
+            }
+        }
+    }
+
+    #[test]
+    fn a_clipped_map_keeps_its_floor() {
+        // Clipped at −1, 0, 1 and 3 σ: from a sixth to nearly all pixels on the floor.
+        for floor in [-1.0, 0.0, 1.0, 3.0] {
+            for map in [noise(), smooth_noise()] {
+                let mut clipped: Vec<f64> = map.iter().map(|v| v.max(floor)).collect();
+                clipped[SIDE * 64 + 64] = 50.0;
+                let got = inspect(&clipped, SIDE, 0.0, false);
+                // So few pixels stand above 3 σ that the lowest of them may be the answer.
+                let found = got.clipped_floor.expect("clipped");
+                assert!((0.0..0.05).contains(&(found - floor)), "{floor}: {found}");
+                assert!(floor > 2.0 || (found - floor).abs() < 1e-12, "{floor}: {found}");
+                assert!(got.fill_values.is_empty(), "{floor}: {got:?}");
+            }
+        }
+    }
+
+    #[test]
+    fn a_masked_map_is_clipped_at_its_threshold() {
+        // A Gaussian source, everything below 5 set to 0.
+        let map: Vec<f64> = (0..SIDE * SIDE)
+            .map(|i| {
+                let (dx, dy) = ((i % SIDE) as f64 - 60.2, (i / SIDE) as f64 - 70.7);
+                let v = 100.0 * (-(dx * dx + dy * dy) / 100.0).exp();
+                if v < 5.0 { 0.0 } else { v }
+            })
+            .collect();
+        let got = inspect(&map, SIDE, 0.0, false);
+        let lowest_left = map.iter().copied().filter(|v| *v > 0.0).fold(f64::MAX, f64::min);
+        let floor = got.clipped_floor.expect("clipped");
+        assert!(floor.abs() < 1e-12 || (floor - lowest_left).abs() < 1e-12, "{floor}");
+        assert!(got.fill_values.is_empty());
+    }
+
+    #[test]
+    fn a_ceiling_is_a_plateau_and_not_blank() {
+        let map: Vec<f64> = noise()
+            .iter()
+            .enumerate()
+            .map(|(i, v)| {
+                let (dx, dy) = ((i % SIDE) as f64 - 64.0, (i / SIDE) as f64 - 64.0);
+                (v + 200.0 * (-(dx * dx + dy * dy) / 200.0).exp()).min(60.0)
+            })
+            .collect();
+        let got = inspect(&map, SIDE, 0.0, false);
+        assert!(got.fill_values.is_empty() && got.clipped_floor.is_none());
+        // 200 exp(−r²/200) > 60 for r² < 200 ln(10/3): π·240.8 = 756 pixels.
+        assert!((got.plateau_pixels as f64 - 756.0).abs() < 30.0, "{}", got.plateau_pixels);
+    }
+
+    #[test]
+    fn coarse_levels_are_not_blank_but_a_fill_among_them_is() {
+        let coarse: Vec<f64> =
+            smooth_noise().iter().map(|v| (v / 0.5).round() * 0.5 + 0.0).collect();
+        assert_eq!(inspect(&coarse, SIDE, 0.5, false), Findings::default());
+        let filled: Vec<f64> =
+            (0..coarse.len()).map(|i| if outside_circle(i) { -50.0 } else { coarse[i] }).collect();
+        assert_eq!(inspect(&filled, SIDE, 0.5, false).fill_values, [-50.0]);
+    }
+
+    #[test]
+    fn integer_maps_report_floors_only() {
+        let map: Vec<f64> = smooth_noise().iter().map(|v| (v * 4.0).round().max(0.0)).collect();
+        let got = inspect(&map, SIDE, 1.0, true);
+        assert_eq!(got, Findings { clipped_floor: Some(0.0), ..Findings::default() });
+    }
+}

@@ -1,0 +1,222 @@
+//! Maps whose low values were cut off: set to a floor, or blanked.
+
+use statrs::distribution::{ContinuousCDF, Normal};
+
+use super::{Field, Noise, NoiseError, NoiseHints, NoiseSettings};
+use super::{grow_px, quantisation_floor, source_mask};
+use crate::grid::PixelMask;
+use crate::stats::sorted_quantile;
+
+/// Most of the pixels that may sit at the floor while the rest still shows the noise.
+const MOST_AT_FLOOR: f64 = 0.8;
+
+/// The level at which the map was cut off: stated, or the smallest value where many pixels
+/// share it exactly (more than the next quantisation step holds). `None` for other maps.
+pub(super) fn floor_of(field: &Field, hints: &NoiseHints) -> Option<f64> {
+    let step = hints.quantisation_step.max(0.0);
+    let floor = hints.clipped_floor.filter(|f| f.is_finite()).unwrap_or(field.lowest);
+    let edge = floor + 0.5 * step;
+    let at_floor = field.values.iter().filter(|v| **v <= edge).count();
+    let share = at_floor as f64 / field.present as f64;
+    if hints.clipped_floor.is_some() {
+        return (at_floor >= 10).then_some(floor);
+    }
+    if step > 0.0 {
+        let next = field.values.iter().filter(|v| **v > edge && **v <= edge + step).count();
+        return (share >= 0.02 && at_floor > next && at_floor >= 10).then_some(floor);
+    }
+    (at_floor >= 10 && share >= 0.005).then_some(floor)
+}
+
+/// Background and rms of a map cut off at `floor`, one value for the whole map: a straight
+/// line through (Gaussian quantile, value) of the values above the floor. The first fit
+/// uses the lower 60 % of them; emission found with it is masked for the second.
+///
+/// # Errors
+/// [`NoiseError::NotVisible`] where more than 80 % of the pixels are at the floor, or
+/// where a gap above it shows that the noise was cut off as a whole.
+pub(super) fn estimate(
+    field: &Field,
+    settings: &NoiseSettings,
+    hints: &NoiseHints,
+    floor: f64,
+) -> Result<Noise, NoiseError> {
+    let step = hints.quantisation_step.max(0.0);
+    let lowest_rms = quantisation_floor(hints);
+    let mut mask = PixelMask::new(field.columns, field.rows);
+    let mut noise = None;
+    for round in 0..3 {
+        let (above, at_floor) = split(field, &mask, floor + 0.5 * step);
+        let total = above.len() + at_floor;
+        if total < settings.minimum_pixels {
+            return Err(NoiseError::NoEmptySky { found: total, needed: settings.minimum_pixels });
+        }
+        let share = at_floor as f64 / total as f64;
+        let hidden = NoiseError::NotVisible {
+            share_percent: 100.0 * share,
+            as_what: "at the map's lowest value",
+        };
+        if round == 0 && gap_above(&above, floor, step) {
+            return Err(hidden);
+        }
+        let upper = if round == 0 { share + 0.6 * (1.0 - share) } else { 0.99 };
+        let fit = if step > 0.0 {
+            fit_steps(&above, at_floor, floor, step, upper)
+        } else {
+            (share <= MOST_AT_FLOOR).then(|| fit_quantiles(&above, at_floor, upper)).flatten()
+        };
+        let (level, rms) = match fit {
+            Some((level, rms)) if rms > lowest_rms => (level, rms),
+            // Rounding hides the noise: its floor is all that is known.
+            _ if step > 0.0 && above.len() < total / 2 => (floor, lowest_rms),
+            _ => return Err(hidden),
+        };
+        let mut model = Noise::uniform(field.columns, field.rows, level, rms);
+        model.method = "censored";
+        model.quantisation_floor = lowest_rms;
+        mask = source_mask(field, &model, settings, grow_px(hints, None));
+        model.source_mask = mask.clone();
+        noise = Some(model);
+    }
+    noise.ok_or(NoiseError::NoEmptySky { found: 0, needed: settings.minimum_pixels })
+}
+
+/// The unmasked values above `edge`, sorted, and the number of those not above it.
+fn split(field: &Field, mask: &PixelMask, edge: f64) -> (Vec<f64>, usize) {
+    let mut above = Vec::new();
+    let mut at_floor = 0;
+    for y in 0..field.rows {
+        for (value, masked) in field.row(y).iter().zip(mask.row(y)) {
+            if *masked || value.is_nan() {
+                continue;
+            }
+            if *value > edge {
+                above.push(*value);
+            } else {
+                at_floor += 1;
+            }
+        }
+    }
+    above.sort_unstable_by(f64::total_cmp);
+    (above, at_floor)
+}
+
+/// Whether the smallest value above the floor lies so far above it that a band of values,
+/// the noise among them, must have been set to the floor.
+fn gap_above(above: &[f64], floor: f64, step: f64) -> bool {
+    let (Some(lowest), Some(middle)) = (above.first(), sorted_quantile(above, 0.5)) else {
+        return true;
+    };
+    let gap = lowest - floor;
+    let spacing = (middle - lowest) / (0.5 * above.len() as f64);
+    gap > 1.5 * step && gap > 20.0 * spacing && gap > 0.02 * (middle - lowest)
+}
+
+/// Least-squares line through Gaussian quantiles up to the share `upper`.
+fn fit_quantiles(above: &[f64], at_floor: usize, upper: f64) -> Option<(f64, f64)> {
+    let total = (above.len() + at_floor) as f64;
+    let last = ((upper * total) as usize).saturating_sub(at_floor).min(above.len());
+    if last < 20 {
+        return None;
+    }
+    let normal = Normal::standard();
+    let samples = last.min(400);
+    line((0..samples).filter_map(|i| {
+        let rank = ((i as f64 + 0.5) * last as f64 / samples as f64) as usize;
+        let share = (at_floor as f64 + rank as f64 + 0.5) / total;
+        let q = normal.inverse_cdf(share);
+        // Weight: density² over the variance of a share, as for a quantile's error.
+        let density = libm::exp(-0.5 * q * q);
+        above.get(rank).map(|v| (q, *v, density * density / (share * (1.0 - share))))
+    }))
+}
+
+/// The same for rounded values: shares at the upper edges of the steps.
+fn fit_steps(
+    above: &[f64],
+    at_floor: usize,
+    floor: f64,
+    step: f64,
+    upper: f64,
+) -> Option<(f64, f64)> {
+    let total = (above.len() + at_floor) as f64;
+    let normal = Normal::standard();
+    let mut edges = Vec::new();
+    for k in 0..4000 {
+        let edge = floor + (f64::from(k) + 0.5) * step;
+        let share = (at_floor + above.partition_point(|v| *v <= edge)) as f64 / total;
+        if share > upper.max(0.9) || share >= 1.0 - 2.0 / total {
+            break;
+        }
+        if share * total >= 3.0 {
+            let q = normal.inverse_cdf(share);
+            let density = libm::exp(-0.5 * q * q);
+            edges.push((q, edge, density * density / (share * (1.0 - share))));
+        }
+    }
+    if edges.len() < 2 { None } else { line(edges.into_iter()) }
+}
+
+/// Weighted straight line value = level + rms · q, as (level, rms).
+fn line(points: impl Iterator<Item = (f64, f64, f64)>) -> Option<(f64, f64)> {
+    let (mut w, mut q, mut v, mut qq, mut qv) = (0.0, 0.0, 0.0, 0.0, 0.0);
+    for (x, y, weight) in points {
+        w += weight;
+        q += weight * x;
+        v += weight * y;
+        qq += weight * x * x;
+        qv += weight * x * y;
+    }
+    let determinant = w * qq - q * q;
+    if !(determinant > 1e-12 * w * qq) {
+        return None;
+    }
+    let rms = (w * qv - q * v) / determinant;
+    let level = (v - rms * q) / w;
+    (rms > 0.0 && rms.is_finite() && level.is_finite()).then_some((level, rms))
+}
+
+/// Tells maps whose faint pixels were blanked: a sharp lower end of the values, and blank
+/// pixels that lie beside the faintest ones.
+///
+/// # Errors
+/// [`NoiseError::NotVisible`] for such a map.
+pub(super) fn check_for_cut_to_blank(field: &Field) -> Result<(), NoiseError> {
+    let pixels = field.values.len();
+    let blank = pixels - field.present;
+    if (blank as f64) < 0.1 * pixels as f64 || field.present < 50 {
+        return Ok(());
+    }
+    let mut sorted: Vec<f64> = field.values.iter().copied().filter(|v| !v.is_nan()).collect();
+    sorted.sort_unstable_by(f64::total_cmp);
+    let at = |q| sorted_quantile(&sorted, q).unwrap_or(0.0);
+    let (low, middle) = (at(0.16), at(0.5));
+    // Gaussian values reach 2.5 rms below the middle in 100 samples; a cut distribution
+    // ends within 1.7 of what would be one rms.
+    if middle - field.lowest > 1.7 * (middle - low) {
+        return Ok(());
+    }
+    let beside: Vec<f64> = (0..field.rows)
+        .flat_map(|y| (0..field.columns).map(move |x| (x, y)))
+        .filter_map(|(x, y)| {
+            let value = field.row(y).get(x).copied().filter(|v| !v.is_nan())?;
+            let blank = |x: Option<usize>, y: Option<usize>| match (x, y) {
+                (Some(x), Some(y)) if x < field.columns => {
+                    field.row(y).get(x).is_some_and(|v| v.is_nan())
+                }
+                _ => false,
+            };
+            let beside = blank(x.checked_sub(1), Some(y))
+                || blank(Some(x + 1), Some(y))
+                || blank(Some(x), y.checked_sub(1))
+                || blank(Some(x), Some(y + 1));
+            beside.then_some(value)
+        })
+        .collect();
+    let faint = beside.iter().filter(|v| **v < at(0.3)).count();
+    if 2 * faint > beside.len() {
+        let share_percent = 100.0 * blank as f64 / pixels as f64;
+        return Err(NoiseError::NotVisible { share_percent, as_what: "blank beside its faintest" });
+    }
+    Ok(())
+}

@@ -1,0 +1,473 @@
+//! Ridge lines: one per side, traced outwards from the core.
+//!
+//! The brightness around the core is sampled on circles. On each side the ridge is the path
+//! through the circles that gathers most signal-to-noise against a penalty on turning
+//! (dynamic programming, Viterbi 1967, IEEE Trans. IT 13, 260), so that a gap does not stop
+//! it and a noise peak does not turn it. Each point is then moved to the crest of its own
+//! transverse profile. "Bearing of the ridge at d" is the direction from the core to the
+//! ridge's point at radial distance d.
+
+use crate::map::beam::Beam;
+use crate::map::geometry::LocalFrame;
+use crate::measurement::{Because, Measurement};
+use crate::stats::normal_probability;
+use crate::units::{SkyOffset, wrap_difference_deg, wrap_directed_deg};
+use crate::window::Window;
+
+/// One point of a ridge, offsets from the core in sky units.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct RidgePoint {
+    /// Radial distance from the core.
+    pub distance: f64,
+    /// Bearing from the core.
+    pub bearing_deg: f64,
+    /// Offset from the core.
+    pub offset: SkyOffset,
+    /// Brightness on the crest, map unit, core taken off.
+    pub brightness: f64,
+    /// Local rms, map unit.
+    pub rms: f64,
+    /// FWHM across the ridge, sky units.
+    pub width: Measurement,
+    /// The same with the beam's projected width taken off.
+    pub width_deconvolved: Measurement,
+}
+
+impl RidgePoint {
+    /// Brightness over local rms.
+    pub fn signal_to_noise(&self) -> f64 {
+        self.brightness / self.rms.max(f64::MIN_POSITIVE)
+    }
+}
+
+/// The ridge of one side.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Ridge {
+    /// Direction in which the side starts.
+    pub start_deg: f64,
+    /// Whether anything of this side stands above the outline threshold beyond one beam.
+    pub detected: bool,
+    /// Points at growing distance, up to the last one above the outline threshold.
+    pub points: Vec<RidgePoint>,
+}
+
+impl Ridge {
+    /// Bearing at a radial distance: interpolated, the first or last point's beyond the ends,
+    /// the starting direction where there is no point.
+    pub fn bearing_at(&self, distance: f64) -> f64 {
+        let (Some(first), Some(last)) = (self.points.first(), self.points.last()) else {
+            return self.start_deg;
+        };
+        if distance <= first.distance {
+            return first.bearing_deg;
+        }
+        if distance >= last.distance {
+            return last.bearing_deg;
+        }
+        let next = self.points.partition_point(|p| p.distance <= distance);
+        let (a, b) = (&self.points[next - 1], &self.points[next]);
+        let t = (distance - a.distance) / (b.distance - a.distance);
+        wrap_directed_deg(a.bearing_deg + t * wrap_difference_deg(b.bearing_deg - a.bearing_deg))
+    }
+
+    /// Length along the ridge from the core to its last point.
+    pub fn length(&self) -> f64 {
+        let mut previous = SkyOffset::default();
+        let mut sum = 0.0;
+        for point in &self.points {
+            sum += point.offset.minus(previous).radius();
+            previous = point.offset;
+        }
+        sum
+    }
+}
+
+/// Brightness around the core on circles.
+struct Polar {
+    step: f64,
+    first: f64,
+    angles: usize,
+    /// Signal-to-noise per circle and angle; NaN where the map has nothing usable.
+    signal: Vec<Vec<f64>>,
+}
+
+impl Polar {
+    fn distance(&self, circle: usize) -> f64 {
+        self.first + circle as f64 * self.step
+    }
+
+    fn angle_deg(&self, index: usize) -> f64 {
+        index as f64 * 360.0 / self.angles as f64
+    }
+}
+
+/// What the tracing needs to know beside the window.
+#[derive(Clone, Copy, Debug)]
+pub struct RidgeContext<'a> {
+    /// Frame whose origin is the core.
+    pub frame: &'a LocalFrame,
+    /// The beam.
+    pub beam: &'a Beam,
+    /// Signal-to-noise at which a ridge ends.
+    pub outline_sigma: f64,
+    /// Direction of one side where the observer or the source's shape tells it.
+    pub hint_deg: Option<f64>,
+    /// Normal deviate of the limits' confidence.
+    pub z_confidence: f64,
+}
+
+/// Two sides are never started closer together than this.
+const LEAST_SIDE_ANGLE_DEG: f64 = 60.0;
+/// Weight of turning against gathered signal in the path.
+const TURN_PENALTY: f64 = 0.6;
+/// More circles than this are never used: the step grows instead.
+const MOST_CIRCLES: usize = 400;
+
+/// Traces the ridges of both sides on a window from which the core has been taken off.
+pub fn trace_ridges(window: &Window, context: &RidgeContext) -> [Ridge; 2] {
+    let polar = sample_polar(window, context);
+    let starts = starting_directions(&polar, context);
+    let mut ridges =
+        starts.map(|start_deg| Ridge { start_deg, detected: false, points: Vec::new() });
+    for side in 0..2 {
+        let (own, other) = (starts[side], starts[1 - side]);
+        let path = best_path(&polar, own, other);
+        ridges[side].points = crest_points(window, context, &polar, &path);
+        ridges[side].detected =
+            ridges[side].points.last().is_some_and(|p| p.distance > context.beam.major);
+    }
+    // An undetected side starts opposite the detected one.
+    for side in 0..2 {
+        if !ridges[side].detected && ridges[1 - side].detected {
+            ridges[side].points.clear();
+            ridges[side].start_deg = wrap_directed_deg(starts[1 - side] + 180.0);
+        }
+    }
+    ridges
+}
+
+fn sample_polar(window: &Window, context: &RidgeContext) -> Polar {
+    let beam = context.beam;
+    let mut farthest: f64 = 0.0;
+    for ((r, c), &member) in window.member.indexed_iter() {
+        if member {
+            farthest = farthest.max(context.frame.offset(window.pixel(r, c)).radius());
+        }
+    }
+    let first = 0.5 * beam.minor;
+    let farthest = farthest + 0.5 * beam.major;
+    let fine = (beam.minor / 3.0).max(0.5 * context.frame.mean_scale());
+    let circles = (((farthest - first) / fine).ceil().max(1.0) as usize).min(MOST_CIRCLES);
+    let step = ((farthest - first) / circles as f64).max(f64::MIN_POSITIVE);
+    let wanted = std::f64::consts::TAU * farthest / step;
+    // A multiple of 8, so that quarter turns and mirrored maps give the same angles.
+    let angles = ((wanted / 8.0).ceil() as usize * 8).clamp(72, 1440);
+    let mut polar = Polar { step, first, angles, signal: Vec::with_capacity(circles + 1) };
+    for circle in 0..=circles {
+        let radius = polar.distance(circle);
+        polar.signal.push(
+            (0..angles)
+                .map(|k| {
+                    let at = context.frame.pixel(SkyOffset::polar(radius, polar.angle_deg(k)));
+                    match (window.bilinear(at), window.rms_at(at)) {
+                        (Some(b), Some(rms)) if rms > 0.0 => b / rms,
+                        _ => f64::NAN,
+                    }
+                })
+                .collect(),
+        );
+    }
+    polar
+}
+
+/// What a signal-to-noise adds to a path: nothing below 2σ, then logarithmic, so that a hot
+/// spot does not outweigh the whole jet.
+fn gain(signal: f64) -> f64 {
+    if signal > 2.0 { (signal - 1.0).ln() } else { 0.0 }
+}
+
+/// The two directions with most emission beyond one beam, at least 60° apart; opposite
+/// directions are preferred.
+fn starting_directions(polar: &Polar, context: &RidgeContext) -> [f64; 2] {
+    let n = polar.angles;
+    let mut raw = vec![0.0; n];
+    for circle in 0..polar.signal.len() {
+        if polar.distance(circle) < context.beam.major {
+            continue;
+        }
+        for (sum, &signal) in raw.iter_mut().zip(&polar.signal[circle]) {
+            if signal > context.outline_sigma {
+                *sum += gain(signal);
+            }
+        }
+    }
+    // Boxcar of ±15°.
+    let half = (n as f64 * 15.0 / 360.0).round() as usize;
+    let smooth: Vec<f64> =
+        (0..n).map(|k| (0..=2 * half).map(|j| raw[(k + n + j - half) % n]).sum()).collect();
+    let angle = |k: usize| polar.angle_deg(k);
+    let argmax = |weight: &dyn Fn(usize) -> f64| -> Option<f64> {
+        let best = (0..n).map(weight).fold(0.0, f64::max);
+        if best <= 0.0 {
+            return None;
+        }
+        // The middle of a flat top: the vector mean of all angles within rounding of the best.
+        let (mut east, mut north) = (0.0, 0.0);
+        for k in 0..n {
+            if weight(k) >= best * (1.0 - 1e-9) {
+                let (sin, cos) = angle(k).to_radians().sin_cos();
+                east += sin;
+                north += cos;
+            }
+        }
+        Some(wrap_directed_deg(east.atan2(north).to_degrees()))
+    };
+    let first = context.hint_deg.or_else(|| argmax(&|k| smooth[k])).unwrap_or(0.0);
+    let second = argmax(&|k| {
+        let apart = wrap_difference_deg(angle(k) - first).abs();
+        if apart < LEAST_SIDE_ANGLE_DEG {
+            return 0.0;
+        }
+        smooth[k] * (1.0 - apart.to_radians().cos() + 1.0) / 3.0
+    })
+    .unwrap_or_else(|| wrap_directed_deg(first + 180.0));
+    [first, second]
+}
+
+/// The best path of one side: an angle index per circle. Angles nearer to the other side's
+/// start are closed to it.
+fn best_path(polar: &Polar, own_deg: f64, other_deg: f64) -> Vec<usize> {
+    let n = polar.angles;
+    let open: Vec<bool> = (0..n)
+        .map(|k| {
+            let to_own = wrap_difference_deg(polar.angle_deg(k) - own_deg).abs();
+            let to_other = wrap_difference_deg(polar.angle_deg(k) - other_deg).abs();
+            to_own <= to_other && to_own <= 100.0
+        })
+        .collect();
+    let circles = polar.signal.len();
+    let closed = f64::NEG_INFINITY;
+    let angle_step = std::f64::consts::TAU / n as f64;
+    let mut score: Vec<f64> = (0..n)
+        .map(|k| {
+            if !open[k] {
+                return closed;
+            }
+            let apart = wrap_difference_deg(polar.angle_deg(k) - own_deg).to_radians();
+            gain_or_zero(polar.signal[0][k]) - 0.2 * apart * apart
+        })
+        .collect();
+    let mut back: Vec<Vec<u16>> = Vec::with_capacity(circles);
+    back.push(Vec::new());
+    for circle in 1..circles {
+        let radius = polar.distance(circle);
+        // The path turns by up to 45° against the radius within one step.
+        let reach = ((polar.step / (radius * angle_step)).floor() as usize).clamp(1, n / 16);
+        let cost = TURN_PENALTY * (radius * angle_step / polar.step).powi(2);
+        let mut next = vec![closed; n];
+        let mut from = vec![0u16; n];
+        for k in 0..n {
+            if !open[k] {
+                continue;
+            }
+            let mut best = closed;
+            let mut best_from = k;
+            for distance in 0..=reach {
+                for candidate in [(k + n - distance) % n, (k + distance) % n] {
+                    let value = score[candidate] - cost * (distance * distance) as f64;
+                    if value > best {
+                        best = value;
+                        best_from = candidate;
+                    }
+                }
+            }
+            next[k] = best + gain_or_zero(polar.signal[circle][k]);
+            from[k] = best_from as u16;
+        }
+        score = next;
+        back.push(from);
+    }
+    let mut k = (0..n).max_by(|&a, &b| score[a].total_cmp(&score[b])).unwrap_or(0);
+    let mut path = vec![0; circles];
+    for circle in (0..circles).rev() {
+        path[circle] = k;
+        if circle > 0 {
+            k = usize::from(back[circle][k]);
+        }
+    }
+    path
+}
+
+fn gain_or_zero(signal: f64) -> f64 {
+    if signal.is_finite() { gain(signal) } else { 0.0 }
+}
+
+/// Moves the path to the crest of each transverse profile, smooths it over a beam and keeps
+/// it to its last point above the outline threshold.
+fn crest_points(
+    window: &Window,
+    context: &RidgeContext,
+    polar: &Polar,
+    path: &[usize],
+) -> Vec<RidgePoint> {
+    let beam = context.beam;
+    let on_circle = |distance: f64, bearing: f64| {
+        window.cubic(context.frame.pixel(SkyOffset::polar(distance, bearing)))
+    };
+    // Crest near the path on each circle: (distance, bearing, weight).
+    let raw: Vec<(f64, f64, f64)> = path
+        .iter()
+        .enumerate()
+        .map(|(circle, &k)| {
+            let distance = polar.distance(circle);
+            let bearing = polar.angle_deg(k);
+            let fine_deg = (0.15 * beam.minor / distance).to_degrees();
+            let samples: Vec<Option<f64>> =
+                (-4..=4).map(|j| on_circle(distance, bearing + f64::from(j) * fine_deg)).collect();
+            let crest = crest_of(&samples).map_or(0.0, |j| j - 4.0);
+            let signal = polar.signal[circle][k];
+            let weight = if signal.is_finite() { signal.clamp(0.0, 50.0) } else { 0.0 };
+            (distance, bearing + crest * fine_deg, weight)
+        })
+        .collect();
+    let half_window = 0.5 * beam.minor;
+    let mut points = Vec::with_capacity(raw.len());
+    for &(distance, bearing, _) in &raw {
+        let mut turn = 0.0;
+        let mut total = 0.0;
+        for &(d, b, w) in &raw {
+            if (d - distance).abs() <= half_window {
+                let w = w + 1e-3;
+                turn += w * wrap_difference_deg(b - bearing);
+                total += w;
+            }
+        }
+        let bearing_deg = wrap_directed_deg(bearing + turn / total);
+        let offset = SkyOffset::polar(distance, bearing_deg);
+        let at = context.frame.pixel(offset);
+        let (Some(brightness), Some(rms)) = (window.cubic(at), window.rms_at(at)) else { continue };
+        points.push(RidgePoint {
+            distance,
+            bearing_deg,
+            offset,
+            brightness,
+            rms,
+            width: Measurement::missing(Because::Unresolved),
+            width_deconvolved: Measurement::missing(Because::Unresolved),
+        });
+    }
+    let last = points.iter().rposition(|p| {
+        p.signal_to_noise() >= context.outline_sigma && is_member(window, context.frame, p.offset)
+    });
+    points.truncate(last.map_or(0, |k| k + 1));
+    for k in 0..points.len() {
+        let direction = local_direction(&points, k);
+        let (width, deconvolved) = transverse_width(window, context, &points[k], direction);
+        points[k].width = width;
+        points[k].width_deconvolved = deconvolved;
+    }
+    points
+}
+
+/// Whether an offset falls on or next to a member pixel.
+fn is_member(window: &Window, frame: &LocalFrame, offset: SkyOffset) -> bool {
+    let at = frame.pixel(offset);
+    let (x, y) = (at.x - window.x0 as f64, at.y - window.y0 as f64);
+    for dr in [0.0, 1.0] {
+        for dc in [0.0, 1.0] {
+            let (r, c) = (y.floor() + dr, x.floor() + dc);
+            if r >= 0.0
+                && c >= 0.0
+                && (r as usize) < window.rows()
+                && (c as usize) < window.columns()
+                && window.member[[r as usize, c as usize]]
+            {
+                return true;
+            }
+        }
+    }
+    false
+}
+
+/// Fractional index of the highest sample, by a parabola through it and its neighbours.
+fn crest_of(samples: &[Option<f64>]) -> Option<f64> {
+    let at = |k: usize| samples.get(k).copied().flatten();
+    let k = (0..samples.len())
+        .filter(|&k| at(k).is_some())
+        .max_by(|&a, &b| at(a).unwrap_or(f64::MIN).total_cmp(&at(b).unwrap_or(f64::MIN)))?;
+    if k == 0 || k + 1 == samples.len() {
+        return Some(k as f64);
+    }
+    let (Some(a), Some(b), Some(c)) = (at(k - 1), at(k), at(k + 1)) else { return Some(k as f64) };
+    let curvature = a - 2.0 * b + c;
+    Some(
+        k as f64 + if curvature < 0.0 { (0.5 * (a - c) / curvature).clamp(-0.5, 0.5) } else { 0.0 },
+    )
+}
+
+/// Direction of the ridge at a point, from its neighbours.
+fn local_direction(points: &[RidgePoint], k: usize) -> f64 {
+    let low = k.saturating_sub(2);
+    let high = (k + 2).min(points.len() - 1);
+    let from = if low == k { SkyOffset::default() } else { points[low].offset };
+    let chord = points[high].offset.minus(from);
+    if chord.radius() > 0.0 { chord.position_angle_deg() } else { points[k].bearing_deg }
+}
+
+/// FWHM of the transverse profile from its half-maximum crossings, and the same with the
+/// beam's projected width taken off in quadrature. Missing where the profile does not fall
+/// to half on both sides within three beams, or the crest is below 5σ.
+///
+/// Error: a crossing moves by (rms / slope); the slope of a Gaussian at half maximum is
+/// peak × 4 ln 2 / (2 FWHM) × 2 = peak × 1.386 / FWHM, so that both crossings together give
+/// 1.02 FWHM over the crest's signal-to-noise.
+fn transverse_width(
+    window: &Window,
+    context: &RidgeContext,
+    point: &RidgePoint,
+    direction_deg: f64,
+) -> (Measurement, Measurement) {
+    let missing = Measurement::missing(Because::Unresolved);
+    let signal = point.signal_to_noise();
+    if signal < 5.0 {
+        return (
+            Measurement::missing(Because::JetNotDetected),
+            Measurement::missing(Because::JetNotDetected),
+        );
+    }
+    let step = 0.1 * context.beam.minor;
+    let reach = (3.0 * context.beam.major / step).ceil() as usize;
+    let half = 0.5 * point.brightness;
+    let crossing = |sign: f64| -> Option<f64> {
+        let across = SkyOffset::polar(sign, direction_deg + 90.0);
+        let mut previous = point.brightness;
+        for k in 1..=reach {
+            let distance = k as f64 * step;
+            let value =
+                window.cubic(context.frame.pixel(point.offset.plus(across.times(distance))))?;
+            if value <= half {
+                return Some(
+                    distance - step * (half - value) / (previous - value).max(f64::MIN_POSITIVE),
+                );
+            }
+            previous = value;
+        }
+        None
+    };
+    let (Some(left), Some(right)) = (crossing(-1.0), crossing(1.0)) else {
+        return (missing, missing);
+    };
+    let width = left + right;
+    let sigma = 1.02 * width / signal;
+    let beam_width = context.beam.projected_fwhm(direction_deg);
+    let square = width * width - beam_width * beam_width;
+    let square_sigma = 2.0 * width * sigma;
+    let deconvolved = if square > 2.0 * square_sigma {
+        let value = square.sqrt();
+        Measurement::symmetric(value, square_sigma / (2.0 * value))
+    } else {
+        let z = context.z_confidence;
+        Measurement::upper_limit((square.max(0.0) + z * square_sigma).sqrt(), normal_probability(z))
+    };
+    (Measurement::symmetric(width, sigma), deconvolved)
+}

@@ -1,0 +1,208 @@
+//! Which connected regions are one source: the region at the host (or the map's middle),
+//! its partner on the other side, and fragments that lie along them.
+//!
+//! A lobe torn off its core is told from an unrelated neighbour by how many groups like it
+//! chance would bring: the density of regions at least as bright, times the area in which
+//! the group would have been accepted. The thresholds are our own, set on real survey maps.
+
+use crate::map::geometry::LocalFrame;
+use crate::regions::Region;
+use crate::units::{Pixel, SkyOffset};
+
+/// Where the source is looked for.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Anchor {
+    /// Position on the map.
+    pub pixel: Pixel,
+    /// Whether it is a known host or core (else the map's middle).
+    pub is_known: bool,
+}
+
+/// The regions taken as one source.
+#[derive(Clone, Debug, PartialEq)]
+pub struct SourceRegions {
+    /// Indices into the list of regions, ascending.
+    pub members: Vec<usize>,
+    /// Expected number of chance groups as good as the joined one; 0 where nothing was joined.
+    pub chance: f64,
+}
+
+/// Chance groups above which joining is refused when a region lies at the anchor already.
+const CHANCE_WITH_CORE: f64 = 0.03;
+/// The same where nothing lies at the anchor: a source is then more likely a double around it.
+const CHANCE_WITHOUT_CORE: f64 = 0.5;
+/// Chance singles above which a lone region away from a known host is not its source.
+const CHANCE_SINGLE: f64 = 0.3;
+/// Gap, in beam majors, over which a fragment is taken as part of its neighbour.
+const FRAGMENT_GAP_BEAMS: f64 = 1.5;
+/// From this confidence in chance upwards the joining is called unsure.
+pub const CHANCE_UNSURE: f64 = 0.1;
+
+/// One region as seen from the anchor.
+struct Seen {
+    /// Distance of its nearest pixel, sky units.
+    nearest: f64,
+    /// Flux-weighted middle from the anchor, sky units.
+    middle: SkyOffset,
+    /// Summed brightness.
+    flux: f64,
+    /// Regions at least as bright, per sky area, not counting those at the anchor.
+    density: f64,
+}
+
+/// Joins regions to one source; `None` where no region can be the anchor's.
+///
+/// `beam` is the beam's major axis and `map_area` the map's area, both in the frame's units.
+pub fn associate(
+    regions: &[Region],
+    anchor: Anchor,
+    frame: &LocalFrame,
+    beam: f64,
+    map_area: f64,
+) -> Option<SourceRegions> {
+    let mut seen: Vec<Seen> = regions
+        .iter()
+        .map(|region| {
+            let nearest = region
+                .runs
+                .iter()
+                .map(|run| {
+                    // The nearest point of a run to the anchor lies at its ends or beside it.
+                    let x = anchor.pixel.x.clamp(run.x0 as f64, run.x1 as f64);
+                    frame.offset(Pixel::new(x, run.y as f64)).radius()
+                })
+                .fold(f64::INFINITY, f64::min);
+            Seen {
+                nearest,
+                middle: frame.offset(Pixel::new(region.centroid.0, region.centroid.1)),
+                flux: region.sum,
+                density: 0.0,
+            }
+        })
+        .collect();
+    let reach = if anchor.is_known { 1.0 } else { 2.0 } * beam;
+    let at_anchor: Vec<usize> = (0..seen.len()).filter(|&i| seen[i].nearest <= reach).collect();
+    for i in 0..seen.len() {
+        let brighter = (0..seen.len())
+            .filter(|j| !at_anchor.contains(j) && seen[*j].flux >= seen[i].flux)
+            .count();
+        seen[i].density = brighter.max(1) as f64 / map_area;
+    }
+
+    let mut members = at_anchor.clone();
+    let mut chance = 0.0;
+    let allowed = if members.is_empty() { CHANCE_WITHOUT_CORE } else { CHANCE_WITH_CORE };
+    let pair = best_pair(&seen, &at_anchor, beam);
+    match pair {
+        Some((expected, i, j)) if expected <= allowed => {
+            members.extend([i, j]);
+            chance = expected;
+        }
+        _ if members.is_empty() => {
+            let i = (0..seen.len()).min_by(|&a, &b| seen[a].nearest.total_cmp(&seen[b].nearest))?;
+            let expected = seen[i].density * std::f64::consts::PI * seen[i].nearest.powi(2);
+            if anchor.is_known && expected > CHANCE_SINGLE {
+                return None;
+            }
+            members.push(i);
+            if anchor.is_known {
+                chance = expected;
+            }
+        }
+        _ => {}
+    }
+    join_fragments(regions, &seen, &mut members, frame, beam);
+    members.sort_unstable();
+    members.dedup();
+    Some(SourceRegions { members, chance })
+}
+
+/// The pair of regions on opposite sides of the anchor that chance explains worst, with the
+/// expected number of chance pairs as good.
+fn best_pair(seen: &[Seen], at_anchor: &[usize], beam: f64) -> Option<(f64, usize, usize)> {
+    let mut best: Option<(f64, usize, usize)> = None;
+    for i in 0..seen.len() {
+        for j in i + 1..seen.len() {
+            if at_anchor.contains(&i) || at_anchor.contains(&j) {
+                continue;
+            }
+            let (a, b) = (&seen[i], &seen[j]);
+            let (ra, rb) = (a.middle.radius(), b.middle.radius());
+            let cosine = a.middle.dot(b.middle) / (ra * rb).max(f64::MIN_POSITIVE);
+            let angle_deg = cosine.clamp(-1.0, 1.0).acos().to_degrees();
+            let departure_deg = (180.0 - angle_deg).max(5.0);
+            let arm_ratio = ra.max(rb) / ra.min(rb).max(0.5 * beam);
+            let flux_ratio = a.flux.max(b.flux) / a.flux.min(b.flux).max(f64::MIN_POSITIVE);
+            if departure_deg > 75.0 || arm_ratio > 4.0 || flux_ratio > 50.0 {
+                continue;
+            }
+            // Each partner anywhere within its own distance; the second within twice the
+            // departure from opposition, the arm ratio and the flux ratio as unequal as seen.
+            let disc = |s: &Seen| s.density * std::f64::consts::PI * s.middle.radius().powi(2);
+            let expected = disc(a)
+                * disc(b)
+                * (departure_deg / 90.0)
+                * (arm_ratio.ln() / 4f64.ln()).clamp(0.15, 1.0)
+                * (flux_ratio.ln() / 50f64.ln()).clamp(0.15, 1.0);
+            if best.is_none_or(|(least, ..)| expected < least) {
+                best = Some((expected, i, j));
+            }
+        }
+    }
+    best
+}
+
+/// Adds regions within a small gap of a member, and regions in the corridor between the
+/// anchor and a member, until none is left to add.
+fn join_fragments(
+    regions: &[Region],
+    seen: &[Seen],
+    members: &mut Vec<usize>,
+    frame: &LocalFrame,
+    beam: f64,
+) {
+    let gap_px = FRAGMENT_GAP_BEAMS * beam / frame.mean_scale();
+    loop {
+        let found = (0..regions.len()).find(|k| {
+            !members.contains(k)
+                && members.iter().any(|&m| {
+                    gap_below(&regions[m], &regions[*k], gap_px)
+                        || in_corridor(seen[*k].middle, seen[m].middle, beam)
+                })
+        });
+        match found {
+            Some(k) => members.push(k),
+            None => return,
+        }
+    }
+}
+
+/// Whether `point` lies between the anchor and `end`, within a beam of the line.
+fn in_corridor(point: SkyOffset, end: SkyOffset, beam: f64) -> bool {
+    let length = end.radius();
+    if length <= 2.0 * beam {
+        return false;
+    }
+    let along = point.dot(end) / length;
+    let across = (point.radius().powi(2) - along * along).max(0.0).sqrt();
+    along > 0.0 && along < length && across <= beam
+}
+
+/// Whether two regions come within `gap_px` of each other.
+fn gap_below(a: &Region, b: &Region, gap_px: f64) -> bool {
+    let box_gap = |a0: usize, a1: usize, b0: usize, b1: usize| {
+        (b0 as f64 - a1 as f64).max(a0 as f64 - b1 as f64).max(0.0)
+    };
+    if box_gap(a.bbox.x0, a.bbox.x1, b.bbox.x0, b.bbox.x1)
+        .hypot(box_gap(a.bbox.y0, a.bbox.y1, b.bbox.y0, b.bbox.y1))
+        > gap_px
+    {
+        return false;
+    }
+    a.runs.iter().any(|p| {
+        b.runs.iter().any(|q| {
+            let dy = p.y.abs_diff(q.y) as f64;
+            dy <= gap_px && box_gap(p.x0, p.x1, q.x0, q.x1).hypot(dy) <= gap_px
+        })
+    })
+}

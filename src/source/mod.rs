@@ -1,0 +1,249 @@
+//! The source on the map: which regions belong to it, its contour, peaks, core, ridges and
+//! sides, in the order in which each needs the one before.
+
+pub mod associate;
+pub mod core;
+pub mod sides;
+
+use ndarray::Array2;
+
+use crate::contour::{contour_of_regions, farthest_pair};
+use crate::grid::Grid;
+use crate::map::beam::Beam;
+use crate::map::geometry::{LocalFrame, SkyGeometry};
+use crate::noise::{Noise, NoiseCorrelation};
+use crate::regions::{Region, local_maxima, region_mask};
+use crate::ridge::{Ridge, RidgeContext, trace_ridges};
+use crate::units::Pixel;
+use crate::window::Window;
+
+use self::associate::SourceRegions;
+use self::core::{Core, KnownCore, Peak, choose_core};
+use self::sides::{SideFeatures, find_features};
+
+/// What the source stages need to know of the map.
+#[derive(Clone, Copy)]
+pub struct SourceInput<'a> {
+    /// Brightness, map unit.
+    pub grid: &'a dyn Grid,
+    /// Noise model.
+    pub noise: &'a Noise,
+    /// Correlation of the noise.
+    pub correlation: &'a NoiseCorrelation,
+    /// Geometry of the map.
+    pub geometry: &'a SkyGeometry,
+    /// Working beam, plane units.
+    pub beam: &'a Beam,
+    /// All regions of the map.
+    pub regions: &'a [Region],
+    /// The source's regions.
+    pub chosen: &'a SourceRegions,
+    /// What the observer knows of the core.
+    pub known: KnownCore,
+    /// Direction of the jet side where the observer knows it.
+    pub jet_side_pa_deg: Option<f64>,
+    /// Lowest level the contour may have, map unit.
+    pub least_level: f64,
+    /// Threshold of the outline in rms.
+    pub outline_sigma: f64,
+    /// Normal deviate of the limits' confidence.
+    pub z_confidence: f64,
+}
+
+/// The source, from contour to sides.
+#[derive(Clone, Debug)]
+pub struct SourceModel {
+    /// The map around the source, background removed.
+    pub window: Window,
+    /// The same with the core's beam-shaped component taken off.
+    pub coreless: Window,
+    /// Level of the contour, map unit.
+    pub level: f64,
+    /// Points of the contour.
+    pub contour: Vec<Pixel>,
+    /// Whether the contour meets the map's edge or a blank patch.
+    pub cut_off: bool,
+    /// The two contour points farthest apart.
+    pub ends: [Pixel; 2],
+    /// Local maxima, brightest first.
+    pub peaks: Vec<Peak>,
+    /// The core.
+    pub core: Core,
+    /// Local frame about the core, or about the flux-weighted middle.
+    pub frame: LocalFrame,
+    /// Flux-weighted middle.
+    pub middle: Pixel,
+    /// Ridges and features of the sides, where there is a core to measure them from.
+    pub sides: Option<([Ridge; 2], [SideFeatures; 2])>,
+}
+
+/// Peaks closer together than this many beam minors are one.
+const PEAK_SEPARATION_BEAMS: f64 = 0.7;
+
+/// Models the source; `None` where its contour has no extent (all its pixels fall below the
+/// contour level, a clipped map say).
+pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
+    let members: Vec<Region> =
+        input.chosen.members.iter().filter_map(|&k| input.regions.get(k).cloned()).collect();
+    let brightest = members.iter().max_by(|a, b| a.peak_snr.total_cmp(&b.peak_snr))?;
+    let weight: f64 = members.iter().map(|r| r.sum).sum();
+    let middle = Pixel::new(
+        members.iter().map(|r| r.sum * r.centroid.0).sum::<f64>() / weight,
+        members.iter().map(|r| r.sum * r.centroid.1).sum::<f64>() / weight,
+    );
+    if !(middle.x.is_finite() && middle.y.is_finite()) {
+        return None;
+    }
+    let rough = input.geometry.local_frame(middle);
+    let window = cut_window(input, &members, middle, &rough);
+
+    let local_rms = input.noise.rms(brightest.peak.x, brightest.peak.y);
+    let level = (input.outline_sigma * local_rms).max(input.least_level);
+    // Edge and neighbours: the contour is drawn on the source's own pixels and their rim.
+    let own = window.own_regions(&members);
+    let lines = contour_of_regions(&window, level, &own.iter().collect::<Vec<_>>());
+    let cut_off = lines.iter().any(|line| !line.is_closed());
+    let points: Vec<Pixel> = lines
+        .iter()
+        .flat_map(|line| &line.points)
+        .map(|p| Pixel::new(p.x + window.x0 as f64, p.y + window.y0 as f64))
+        .collect();
+    let (first, second, _) = farthest_pair(points.iter().copied(), &rough.to_sky)?;
+    let ends = [first, second];
+
+    let scale = rough.mean_scale();
+    let peaks: Vec<Peak> = local_maxima(
+        input.grid,
+        input.noise,
+        &members,
+        PEAK_SEPARATION_BEAMS * input.beam.minor / scale,
+        input.outline_sigma + 1.0,
+    )
+    .into_iter()
+    .map(|p| Peak {
+        pixel: Pixel::new(p.x, p.y),
+        value: p.value - input.noise.background(p.x, p.y),
+        signal_to_noise: p.snr,
+    })
+    .collect();
+
+    let core = choose_core(
+        &window,
+        &peaks,
+        input.known,
+        ends,
+        input.beam,
+        &rough,
+        (input.noise, input.correlation),
+        input.z_confidence,
+    );
+    let frame = input.geometry.local_frame(core.pixel.unwrap_or(middle));
+    let coreless = without_core(&window, &core, input.beam, &frame);
+    let sides = core.pixel.map(|_| {
+        let context = RidgeContext {
+            frame: &frame,
+            beam: input.beam,
+            outline_sigma: input.outline_sigma,
+            hint_deg: input.jet_side_pa_deg,
+            z_confidence: input.z_confidence,
+        };
+        let ridges = trace_ridges(&coreless, &context);
+        let features =
+            find_features(&peaks, &points, &ridges, &frame, input.beam.major, core.fit.is_some());
+        (ridges, features)
+    });
+    Some(SourceModel {
+        window,
+        coreless,
+        level,
+        contour: points,
+        cut_off,
+        ends,
+        peaks,
+        core,
+        frame,
+        middle,
+        sides,
+    })
+}
+
+/// The window holds the source, the same turned by 180° about its middle or known core (for
+/// the counter-jet's strip), and four beams around.
+fn cut_window(
+    input: &SourceInput,
+    members: &[Region],
+    middle: Pixel,
+    frame: &LocalFrame,
+) -> Window {
+    let centre = input.known.given.or(input.known.host).unwrap_or(middle);
+    let margin = 4.0 * input.beam.major / frame.mean_scale() + 2.0;
+    let (mut x_low, mut x_high, mut y_low, mut y_high) = (f64::MAX, f64::MIN, f64::MAX, f64::MIN);
+    for region in members {
+        let b = region.bbox;
+        for x in
+            [b.x0 as f64, b.x1 as f64, 2.0 * centre.x - b.x0 as f64, 2.0 * centre.x - b.x1 as f64]
+        {
+            x_low = x_low.min(x - margin);
+            x_high = x_high.max(x + margin);
+        }
+        for y in
+            [b.y0 as f64, b.y1 as f64, 2.0 * centre.y - b.y0 as f64, 2.0 * centre.y - b.y1 as f64]
+        {
+            y_low = y_low.min(y - margin);
+            y_high = y_high.max(y + margin);
+        }
+    }
+    let (columns, rows) = (input.grid.columns(), input.grid.rows());
+    let low = |v: f64| v.floor().max(0.0) as usize;
+    let high = |v: f64, n: usize| (v.ceil().max(0.0) as usize).min(n.saturating_sub(1));
+    let (x0, y0) = (low(x_low).min(columns - 1), low(y_low).min(rows - 1));
+    let (x1, y1) = (high(x_high, columns).max(x0), high(y_high, rows).max(y0));
+    let shape = (y1 - y0 + 1, x1 - x0 + 1);
+
+    let mut brightness = Array2::from_elem(shape, f64::NAN);
+    let mut rms = Array2::zeros(shape);
+    let (mut values, mut base, mut sigma) = (Vec::new(), Vec::new(), Vec::new());
+    for y in y0..=y1 {
+        input.grid.row_into(y, &mut values);
+        input.noise.row_into(y, &mut base, &mut sigma);
+        for x in x0..=x1 {
+            brightness[[y - y0, x - x0]] = values[x] - base[x];
+            rms[[y - y0, x - x0]] = sigma[x];
+        }
+    }
+    let member_mask = region_mask(columns, rows, members, 0.0);
+    let others: Vec<Region> = input
+        .regions
+        .iter()
+        .enumerate()
+        .filter(|(k, _)| !input.chosen.members.contains(k))
+        .map(|(_, region)| region.clone())
+        .collect();
+    let grow = input.beam.major / frame.mean_scale();
+    let near_members = region_mask(columns, rows, members, 0.5 * grow);
+    let foreign_mask = region_mask(columns, rows, &others, grow);
+    let foreign_core = region_mask(columns, rows, &others, 0.0);
+    Window {
+        x0,
+        y0,
+        brightness,
+        rms,
+        member: Array2::from_shape_fn(shape, |(r, c)| member_mask.get(x0 + c, y0 + r)),
+        foreign: Array2::from_shape_fn(shape, |(r, c)| {
+            let (x, y) = (x0 + c, y0 + r);
+            foreign_core.get(x, y) || (foreign_mask.get(x, y) && !near_members.get(x, y))
+        }),
+    }
+}
+
+/// The window with the core's beam-shaped component taken off.
+fn without_core(window: &Window, core: &Core, beam: &Beam, frame: &LocalFrame) -> Window {
+    let mut coreless = window.clone();
+    if let Some(fit) = core.fit {
+        for ((r, c), value) in coreless.brightness.indexed_iter_mut() {
+            let d = frame.difference(fit.pixel, window.pixel(r, c));
+            *value -= fit.peak * beam.profile(d);
+        }
+    }
+    coreless
+}

@@ -5,7 +5,7 @@ pub const SPEED_OF_LIGHT_KM_S: f64 = 299_792.458;
 /// Boltzmann constant in J/K (exact, SI 2019).
 pub const BOLTZMANN_J_K: f64 = 1.380_649e-23;
 /// One megaparsec in kilometres (IAU 2015 resolution B2: parsec = 648000/π au; au exact).
-pub const KM_PER_MPC: f64 = 3.085_677_581_491_367_3e19;
+pub const KM_PER_MPC: f64 = 3.085_677_581_491_367e19;
 /// Days in a Julian year (IAU).
 pub const DAYS_PER_YEAR: f64 = 365.25;
 /// Seconds in a Julian year.

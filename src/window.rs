@@ -4,7 +4,6 @@
 use ndarray::Array2;
 
 use crate::grid::Grid;
-use crate::regions::{PixelBox, Region, Run};
 
 use crate::units::Pixel;
 
@@ -109,36 +108,6 @@ impl Window {
             }
         }
         Some(sum)
-    }
-}
-
-impl Window {
-    /// Regions of the map with their pixels in the window's own columns and rows; what lies
-    /// outside the window is left out.
-    pub fn own_regions(&self, regions: &[Region]) -> Vec<Region> {
-        let shift = |v: usize, origin: usize| v.saturating_sub(origin);
-        regions
-            .iter()
-            .map(|region| Region {
-                runs: region
-                    .runs
-                    .iter()
-                    .filter(|run| run.y >= self.y0 && run.x1 >= self.x0)
-                    .map(|run| Run {
-                        y: shift(run.y, self.y0),
-                        x0: shift(run.x0, self.x0),
-                        x1: shift(run.x1, self.x0),
-                    })
-                    .collect(),
-                bbox: PixelBox {
-                    x0: shift(region.bbox.x0, self.x0),
-                    y0: shift(region.bbox.y0, self.y0),
-                    x1: shift(region.bbox.x1, self.x0),
-                    y1: shift(region.bbox.y1, self.y0),
-                },
-                ..region.clone()
-            })
-            .collect()
     }
 }
 

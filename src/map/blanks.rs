@@ -5,6 +5,8 @@
 //! connected block of identical values cannot be noise. It need not be blank, though: a map
 //! clipped from below has its floor there, and a saturated one its ceiling.
 
+use std::cmp::Ordering;
+
 /// Pixels a block of identical values needs before it counts.
 const MIN_BLOCK_PIXELS: usize = 64;
 /// Columns and rows it must span.
@@ -15,6 +17,9 @@ const MIN_CLIPPED_FRACTION: f64 = 0.02;
 /// Beyond this fraction a floor is a floor even where the next brightness is far above it:
 /// the map was masked by a threshold, and what is left is the source.
 const MASKED_FRACTION: f64 = 0.5;
+/// Below this fraction of equal neighbours quantised noise has no large blocks: half of the
+/// bonds of a square lattice must be joined before it hangs together (H. Kesten 1980).
+const MAX_EQUAL_NEIGHBOURS: f64 = 0.25;
 /// Most different fill values looked for.
 const MAX_FILL_VALUES: usize = 32;
 /// Most neighbours of the floor whose heights above it are compared.
@@ -45,20 +50,36 @@ struct Extremes {
 impl Extremes {
     /// `None` where there are fewer than two different values.
     fn of(stored: &[f64]) -> Option<Self> {
-        let finite = || stored.iter().copied().filter(|v| v.is_finite());
-        let lowest = finite().reduce(f64::min)?;
-        let highest = finite().reduce(f64::max)?;
-        let second_lowest = finite().filter(|&v| v > lowest).reduce(f64::min)?;
-        let second_highest = finite().filter(|&v| v < highest).reduce(f64::max)?;
-        let count = |value: f64| finite().filter(|v| v.total_cmp(&value).is_eq()).count();
-        Some(Self {
+        let (mut lowest, mut lowest_count) = (f64::INFINITY, 0);
+        let (mut second_lowest, mut second_lowest_count) = (f64::INFINITY, 0);
+        let (mut highest, mut second_highest) = (f64::NEG_INFINITY, f64::NEG_INFINITY);
+        let mut finite = 0;
+        for &value in stored.iter().filter(|v| v.is_finite()) {
+            finite += 1;
+            match (value.total_cmp(&lowest), value.total_cmp(&second_lowest)) {
+                (Ordering::Less, _) => {
+                    (second_lowest, second_lowest_count) = (lowest, lowest_count);
+                    (lowest, lowest_count) = (value, 1);
+                }
+                (Ordering::Equal, _) => lowest_count += 1,
+                (_, Ordering::Less) => (second_lowest, second_lowest_count) = (value, 1),
+                (_, Ordering::Equal) => second_lowest_count += 1,
+                _ => {}
+            }
+            if value > highest {
+                (second_highest, highest) = (highest, value);
+            } else if value < highest && value > second_highest {
+                second_highest = value;
+            }
+        }
+        (second_lowest.is_finite() && second_highest.is_finite()).then_some(Self {
             lowest,
-            lowest_count: count(lowest),
+            lowest_count,
             second_lowest,
-            second_lowest_count: count(second_lowest),
+            second_lowest_count,
             highest,
             second_highest,
-            finite: finite().count(),
+            finite,
         })
     }
 
@@ -96,17 +117,39 @@ pub(super) fn inspect(stored: &[f64], columns: usize, step: f64, is_integer: boo
             continue;
         }
         let is_floor = same(&extremes.lowest) && findings.clipped_floor.is_some();
-        let known = findings.fill_values.iter().chain(&refused).any(|v| same(v));
+        let known = findings.fill_values.iter().chain(&refused).any(same);
         if is_floor || known || findings.fill_values.len() + refused.len() >= MAX_FILL_VALUES {
             continue;
         }
-        if step > 0.0 && !stands_out(stored, value, step) {
+        let by_chance = step > 0.0
+            && equal_neighbours(stored, columns, value) > MAX_EQUAL_NEIGHBOURS
+            && !stands_out(stored, value, step);
+        if by_chance {
             refused.push(value);
         } else {
             findings.fill_values.push(value);
         }
     }
     findings
+}
+
+/// Fraction of neighbours within a row that are equal, pairs with `value` left out.
+fn equal_neighbours(stored: &[f64], columns: usize, value: f64) -> f64 {
+    let (mut pairs, mut equal) = (0usize, 0usize);
+    for row in stored.chunks(columns.max(1)) {
+        for pair in row.windows(2) {
+            if let &[a, b] = pair
+                && a.is_finite()
+                && b.is_finite()
+                && a.total_cmp(&value).is_ne()
+                && b.total_cmp(&value).is_ne()
+            {
+                pairs += 1;
+                equal += usize::from(a.total_cmp(&b).is_eq());
+            }
+        }
+    }
+    equal as f64 / pairs.max(1) as f64
 }
 
 /// Whether a level of quantised values holds far more pixels than its two neighbours.
@@ -215,11 +258,11 @@ fn blocks(stored: &[f64], columns: usize) -> Vec<Block> {
                 Some(at + columns),
             ];
             for next in neighbours.into_iter().flatten() {
-                if begins(next) {
-                    if let Some(mark) = seen.get_mut(next).filter(|mark| !**mark) {
-                        *mark = true;
-                        open.push(next);
-                    }
+                if begins(next)
+                    && let Some(mark) = seen.get_mut(next).filter(|mark| !**mark)
+                {
+                    *mark = true;
+                    open.push(next);
                 }
             }
         }
@@ -342,6 +385,49 @@ mod tests {
         let filled: Vec<f64> =
             (0..coarse.len()).map(|i| if outside_circle(i) { -50.0 } else { coarse[i] }).collect();
         assert_eq!(inspect(&filled, SIDE, 0.5, false).fill_values, [-50.0]);
+    }
+
+    #[test]
+    fn a_patch_of_zeros_in_finely_quantised_data_is_blank() {
+        // 0.04 σ per level: the zeros are not much more frequent than their neighbours.
+        let patched: Vec<f64> = smooth_noise()
+            .iter()
+            .enumerate()
+            .map(|(i, v)| {
+                let inside = i % SIDE < 20 && i / SIDE < 20;
+                if inside { 0.0 } else { (v / 0.04).round() * 0.04 + 0.0 }
+            })
+            .collect();
+        assert_eq!(inspect(&patched, SIDE, 0.04, false).fill_values, [0.0]);
+    }
+
+    #[test]
+    fn extremes_are_counted_in_one_pass_as_in_several() {
+        let map: Vec<f64> = noise().iter().map(|v| (v * 2.0).round() + 0.0).collect();
+        let sorted = |mut v: Vec<f64>| {
+            v.sort_by(f64::total_cmp);
+            v
+        };
+        let all = sorted(map.clone());
+        let levels = {
+            let mut l = all.clone();
+            l.dedup();
+            l
+        };
+        let count = |level: f64| all.iter().filter(|v| (**v - level).abs() < 0.1).count();
+        let got = Extremes::of(&map).expect("several levels");
+        let n = levels.len();
+        for (got, wanted) in [
+            (got.lowest, levels[0]),
+            (got.second_lowest, levels[1]),
+            (got.second_highest, levels[n - 2]),
+            (got.highest, levels[n - 1]),
+        ] {
+            assert!((got - wanted).abs() < 1e-12);
+        }
+        assert_eq!(got.lowest_count, count(levels[0]));
+        assert_eq!(got.second_lowest_count, count(levels[1]));
+        assert_eq!(got.finite, map.len());
     }
 
     #[test]

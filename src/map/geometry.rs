@@ -55,8 +55,9 @@ pub struct SkyGeometry {
 
 /// A linear map between pixels and sky offsets about one pixel, with north as it is there.
 ///
-/// Exact at the origin; away from it a tangent plane's scale grows as 1 + θ²/2 to θ²·3/2,
-/// which is 1e-8 at 20 arcsec and 1e-5 at 10 arcmin from the map's centre.
+/// Exact to first order at the origin. At the angle θ from the map's centre a tangent plane
+/// is stretched by 1 + θ² along the radius and 1 + θ²/2 across, so over a whole map offsets
+/// are off by a fraction of about θ²: 1e-8 at 20 arcsec, 1e-5 at 10 arcmin from the centre.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct LocalFrame {
     /// The pixel whose sky offset is zero.

@@ -8,11 +8,13 @@ mod blanks;
 pub mod description;
 pub mod geometry;
 pub mod image;
+mod keys;
 pub mod manifest;
 pub mod npy;
 mod quantisation;
 pub mod read;
 pub mod text;
+mod words;
 
 use schemars::JsonSchema;
 use serde::{Deserialize, Serialize};
@@ -102,7 +104,7 @@ impl SkyMap {
     /// # Errors
     /// A core outside the array.
     pub fn from_stored(
-        stored: StoredArray,
+        mut stored: StoredArray,
         mut description: MapDescription,
     ) -> Result<Self, DescriptionError> {
         let (rows, columns) = (stored.rows, stored.columns);
@@ -113,9 +115,10 @@ impl SkyMap {
         let beam = geometry.has_scale().then(|| described_beam(&description)).flatten();
 
         let input = InputFacts::of(&stored);
-        let mut values: Vec<f64> = match &stored.samples {
+        let is_single = matches!(stored.samples, Samples::F32(_));
+        let mut values = match std::mem::replace(&mut stored.samples, Samples::F64(Vec::new())) {
             Samples::F32(numbers) => numbers.iter().map(|&n| f64::from(n)).collect(),
-            Samples::F64(numbers) => numbers.clone(),
+            Samples::F64(numbers) => numbers,
         };
         let blank = BlankValue::new(&description, &stored);
         for value in &mut values {
@@ -155,12 +158,11 @@ impl SkyMap {
             }
         }
         let blank_count = values.iter().filter(|v| v.is_nan()).count();
-        let samples = match stored.samples {
+        let samples = if is_single && unchanged {
             // Exact: the values are the stored single-precision numbers or blank.
-            Samples::F32(_) if unchanged => {
-                Samples::F32(values.iter().map(|&value| value as f32).collect())
-            }
-            _ => Samples::F64(values),
+            Samples::F32(values.iter().map(|&value| value as f32).collect())
+        } else {
+            Samples::F64(values)
         };
         Ok(Self {
             samples,

@@ -486,8 +486,7 @@ mod tests {
 
     #[test]
     fn the_digest_is_that_of_the_bytes() {
-        // FIPS 180-2 appendix B gives SHA-256("abc"); a grid of one number is hashed here,
-        // its digest from coreutils' sha256sum.
+        // Digest from coreutils' sha256sum.
         let map = decode(b"1\n", None, None).expect("a grid of one number");
         assert_eq!(map.sha256, "4355a46b19d348dc2f57c046f8ef63d4538ebb936000f3c9ee954a27460dd865");
     }

@@ -27,10 +27,17 @@ pub struct SourceRegions {
     pub chance: f64,
 }
 
-/// Chance groups above which joining is refused when a region lies at the anchor already.
-const CHANCE_WITH_CORE: f64 = 0.03;
-/// The same where nothing lies at the anchor: a source is then more likely a double around it.
+/// Chance pairs above which joining is refused where the region at the anchor is extended:
+/// it is then most likely the whole source.
+const CHANCE_WITH_EXTENDED: f64 = 0.005;
+/// The same where the region at the anchor is compact: it may be the core of a wide double.
+const CHANCE_WITH_COMPACT: f64 = 0.1;
+/// The same where nothing lies at the anchor: a source is then most likely a double around it.
 const CHANCE_WITHOUT_CORE: f64 = 0.5;
+/// A region at the anchor that stays within this many beam majors of it is compact.
+const COMPACT_BEAMS: f64 = 1.75;
+/// Partners fainter than this share of the peak at the anchor could be its sidelobes.
+const SIDELOBE_SHARE: f64 = 0.015;
 /// Chance singles above which a lone region away from a known host is not its source.
 const CHANCE_SINGLE: f64 = 0.3;
 /// Gap, in beam majors, over which a fragment is taken as part of its neighbour.
@@ -42,6 +49,10 @@ pub const CHANCE_UNSURE: f64 = 0.1;
 struct Seen {
     /// Distance of its nearest pixel, sky units.
     nearest: f64,
+    /// Distance of its farthest pixel, sky units.
+    farthest: f64,
+    /// Highest brightness.
+    peak: f64,
     /// Flux-weighted middle from the anchor, sky units.
     middle: SkyOffset,
     /// Summed brightness.
@@ -72,8 +83,16 @@ pub fn associate(
                     frame.offset(Pixel::new(x, run.y as f64)).radius()
                 })
                 .fold(f64::INFINITY, f64::min);
+            let farthest = region
+                .runs
+                .iter()
+                .flat_map(|run| [run.x0, run.x1].map(|x| Pixel::new(x as f64, run.y as f64)))
+                .map(|p| frame.offset(p).radius())
+                .fold(0.0, f64::max);
             Seen {
                 nearest,
+                farthest,
+                peak: region.peak.value,
                 middle: frame.offset(Pixel::new(region.centroid.0, region.centroid.1)),
                 flux: region.sum,
                 density: 0.0,
@@ -91,8 +110,16 @@ pub fn associate(
 
     let mut members = at_anchor.clone();
     let mut chance = 0.0;
-    let allowed = if members.is_empty() { CHANCE_WITHOUT_CORE } else { CHANCE_WITH_CORE };
-    let pair = best_pair(&seen, &at_anchor, beam);
+    let extent = at_anchor.iter().map(|&i| seen[i].farthest).fold(0.0, f64::max);
+    let allowed = if members.is_empty() {
+        CHANCE_WITHOUT_CORE
+    } else if extent <= COMPACT_BEAMS * beam {
+        CHANCE_WITH_COMPACT
+    } else {
+        CHANCE_WITH_EXTENDED
+    };
+    let least_peak = SIDELOBE_SHARE * at_anchor.iter().map(|&i| seen[i].peak).fold(0.0, f64::max);
+    let pair = best_pair(&seen, &at_anchor, least_peak, beam);
     match pair {
         Some((expected, i, j)) if expected <= allowed => {
             members.extend([i, j]);
@@ -119,11 +146,17 @@ pub fn associate(
 
 /// The pair of regions on opposite sides of the anchor that chance explains worst, with the
 /// expected number of chance pairs as good.
-fn best_pair(seen: &[Seen], at_anchor: &[usize], beam: f64) -> Option<(f64, usize, usize)> {
+fn best_pair(
+    seen: &[Seen],
+    at_anchor: &[usize],
+    least_peak: f64,
+    beam: f64,
+) -> Option<(f64, usize, usize)> {
     let mut best: Option<(f64, usize, usize)> = None;
     for i in 0..seen.len() {
         for j in i + 1..seen.len() {
-            if at_anchor.contains(&i) || at_anchor.contains(&j) {
+            let faint = seen[i].peak.min(seen[j].peak) < least_peak;
+            if faint || at_anchor.contains(&i) || at_anchor.contains(&j) {
                 continue;
             }
             let (a, b) = (&seen[i], &seen[j]);
@@ -136,14 +169,15 @@ fn best_pair(seen: &[Seen], at_anchor: &[usize], beam: f64) -> Option<(f64, usiz
             if departure_deg > 75.0 || arm_ratio > 4.0 || flux_ratio > 50.0 {
                 continue;
             }
-            // Each partner anywhere within its own distance; the second within twice the
-            // departure from opposition, the arm ratio and the flux ratio as unequal as seen.
+            // Each partner anywhere within its own distance, and the pair as well matched: the
+            // chance that a product of three uniform ranks (departure from opposition, arm
+            // ratio, flux ratio) is as small is x (1 − ln x + ½ ln² x) (Fisher's combination).
             let disc = |s: &Seen| s.density * std::f64::consts::PI * s.middle.radius().powi(2);
-            let expected = disc(a)
-                * disc(b)
-                * (departure_deg / 90.0)
-                * (arm_ratio.ln() / 4f64.ln()).clamp(0.15, 1.0)
-                * (flux_ratio.ln() / 50f64.ln()).clamp(0.15, 1.0);
+            let x = (departure_deg / 90.0)
+                * (arm_ratio.ln() / 4f64.ln()).clamp(0.05, 1.0)
+                * (flux_ratio.ln() / 50f64.ln()).clamp(0.05, 1.0);
+            let matched = x * (1.0 - x.ln() + 0.5 * x.ln().powi(2));
+            let expected = disc(a) * disc(b) * matched;
             if best.is_none_or(|(least, ..)| expected < least) {
                 best = Some((expected, i, j));
             }

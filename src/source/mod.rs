@@ -7,7 +7,7 @@ pub mod sides;
 
 use ndarray::Array2;
 
-use crate::contour::{contour_of_regions, farthest_pair};
+use crate::contour::{contour_lines, farthest_pair};
 use crate::grid::Grid;
 use crate::map::beam::Beam;
 use crate::map::geometry::{LocalFrame, SkyGeometry};
@@ -100,8 +100,7 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
     let local_rms = input.noise.rms(brightest.peak.x, brightest.peak.y);
     let level = (input.outline_sigma * local_rms).max(input.least_level);
     // Edge and neighbours: the contour is drawn on the source's own pixels and their rim.
-    let own = window.own_regions(&members);
-    let lines = contour_of_regions(&window, level, &own.iter().collect::<Vec<_>>());
+    let lines = contour_lines(&OwnContour { window: &window, level }, level, None);
     let cut_off = lines.iter().any(|line| !line.is_closed());
     let points: Vec<Pixel> = lines
         .iter()
@@ -165,6 +164,31 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
         middle,
         sides,
     })
+}
+
+/// The window as the contour sees it: pixels that are not the source's own lie just below
+/// the level, so that the line closes around the source where the rms varies or a neighbour
+/// touches.
+struct OwnContour<'a> {
+    window: &'a Window,
+    level: f64,
+}
+
+impl Grid for OwnContour<'_> {
+    fn rows(&self) -> usize {
+        self.window.rows()
+    }
+
+    fn columns(&self) -> usize {
+        self.window.columns()
+    }
+
+    fn value(&self, x: usize, y: usize) -> f64 {
+        let value = Grid::value(self.window, x, y);
+        let own = self.window.member.get((y, x)).copied().unwrap_or(false);
+        // A blank pixel stays blank: the line is open there.
+        if own || value.is_nan() { value } else { value.min(0.999 * self.level) }
+    }
 }
 
 /// The window holds the source, the same turned by 180° about its middle or known core (for

@@ -148,7 +148,7 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
         };
         let ridges = trace_ridges(&coreless, &context);
         let features =
-            find_features(&peaks, &points, &ridges, &frame, input.beam.major, core.fit.is_some());
+            find_features(&peaks, &points, &ridges, &frame, input.beam, level, core.fit.is_some());
         (ridges, features)
     });
     Some(SourceModel {

@@ -1,3 +1,4 @@
-//! Integration tests.
+//! Integration tests, in one binary.
 
 mod published;
+mod truth;

@@ -99,9 +99,8 @@ pub fn find_features(
         let nearest = BRIGHTEST_BEYOND_BEAMS * beam.major;
         let inner = ridges[index].points.iter().find(|p| p.distance >= nearest);
         let inner = inner.map_or(0.0, |p| p.brightness);
-        side.brightest =
-            brightest(&mut side.peaks.iter().filter(|f| f.distance() >= nearest))
-                .filter(|f| f.peak.value > inner);
+        side.brightest = brightest(&mut side.peaks.iter().filter(|f| f.distance() >= nearest))
+            .filter(|f| f.peak.value > inner);
         side.hotspot = outer.filter(|f| {
             overall.is_some_and(|all| f.peak.value >= HOTSPOT_BRIGHTNESS * all.peak.value)
         });

@@ -111,7 +111,8 @@ impl Extent {
         if cut_off {
             return Measurement::lower_limit(value.max(0.0), confidence);
         }
-        if value > resolution.max(2.0 * sigma) {
+        // The longest chord of a noisy contour is biased outwards: two errors are not enough.
+        if value > resolution.max(3.0 * sigma) {
             Measurement::symmetric(value, sigma)
         } else {
             Measurement::upper_limit((value.max(0.0) + z * sigma).max(resolution), confidence)

@@ -5,7 +5,7 @@ use std::collections::BTreeMap;
 
 use crate::brightness::{FluxPair, PlacedStrip, StripPair, positive_upper_limit, ratio};
 use crate::class::classify;
-use crate::extent::{Extent, resolution_limit, widest_across};
+use crate::extent::{Extent, feature_sigma, position_sigma, resolution_limit, widest_across};
 use crate::flags::{self, Flag};
 use crate::flux::{Sum, sum_where, widened};
 use crate::map::SkyMap;
@@ -601,7 +601,7 @@ struct Arms {
 fn end_sigma(findings: &Findings, k: usize) -> f64 {
     let beam = findings.observed.working_beam.mean_fwhm();
     let Some((_, features)) = &findings.model.sides else { return beam };
-    features[k].hotspot.map_or(0.5 * beam, |h| 0.60 * beam / h.peak.signal_to_noise.max(1.0))
+    features[k].hotspot.map_or(0.5 * beam, |h| feature_sigma(beam, h.peak.signal_to_noise))
 }
 
 fn arms(findings: &Findings, order: [usize; 2]) -> Arms {
@@ -697,7 +697,7 @@ fn fr_ratios(
     let sigma = order.map(|k| {
         features[k]
             .brightest
-            .map_or(0.0, |f| 0.60 * beam.mean_fwhm() / f.peak.signal_to_noise.max(1.0))
+            .map_or(0.0, |f| feature_sigma(beam.mean_fwhm(), f.peak.signal_to_noise))
     });
     let nearest = BRIGHTEST_BEYOND_BEAMS * beam.major;
     let (distance, monotonic) = match points {
@@ -776,7 +776,7 @@ fn side_record(
         )
     });
     let bearing_sigma = |distance: f64, signal: f64| {
-        ((0.60 * beam.mean_fwhm() / signal.max(1.0)).hypot(core_sigma) / distance).to_degrees()
+        ((position_sigma(beam.mean_fwhm(), signal)).hypot(core_sigma) / distance).to_degrees()
     };
     let inner_distance = 2.0 * beam.major;
     let inner_pa = ridge.points.iter().find(|p| p.distance >= inner_distance).map_or(
@@ -879,7 +879,7 @@ fn side_size(findings: &Findings, k: usize) -> (Measurement, Measurement) {
     let fr = match features[k].brightest {
         Some(f) => {
             let ratio = f.distance() / length;
-            let error = 0.60 * beam.mean_fwhm() / f.peak.signal_to_noise.max(1.0);
+            let error = feature_sigma(beam.mean_fwhm(), f.peak.signal_to_noise);
             Measurement::symmetric(ratio, ratio * (error / f.distance()).hypot(sigma / length))
         }
         None => Measurement::upper_limit(
@@ -920,7 +920,7 @@ fn mean_bearing(findings: &Findings, ridge: &Ridge, core_sigma: f64) -> Measurem
         .iter()
         .map(|p| {
             p.brightness / weight
-                * (0.60 * beam.mean_fwhm() / p.signal_to_noise().max(1.0) / p.distance).powi(2)
+                * (position_sigma(beam.mean_fwhm(), p.signal_to_noise()) / p.distance).powi(2)
         })
         .sum();
     let middle = 0.5 * (strip.inner + strip.outer);

@@ -1,4 +1,6 @@
 //! Integration tests, in one binary.
 
+mod demo;
 mod published;
+mod support;
 mod truth;

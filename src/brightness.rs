@@ -14,7 +14,7 @@ use crate::measurement::{Because, Measurement};
 use crate::noise::{ApertureWeights, Noise, NoiseCorrelation};
 use crate::ridge::{Ridge, RidgePoint};
 use crate::stats::normal_deviate;
-use crate::units::wrap_difference_deg;
+use crate::units::{Pixel, wrap_difference_deg};
 use crate::window::Window;
 
 /// The strip, in sky units.
@@ -47,92 +47,141 @@ const BAND_OUTER: f64 = 2.75;
 /// Each pixel is divided into this many parts along each axis to find its share in a strip.
 const PARTS: usize = 5;
 
-/// Sums a strip along bearings `bearing(d)` between two radial distances.
-///
-/// `mirrored` marks offsets (turned by 180°) that must be usable too, so that both strips
-/// leave out the same places.
-pub fn sum_strip(
-    window: &Window,
-    frame: &LocalFrame,
-    bearing: &dyn Fn(f64) -> f64,
-    inner: f64,
-    outer: f64,
-    half_width: f64,
-) -> StripFlux {
-    let mut strip_sum = 0.0;
-    let mut strip_area = 0.0;
-    let mut blank_area = 0.0;
-    let mut band_sum = 0.0;
-    let mut band_area = 0.0;
-    let mut cells: Vec<(usize, usize, f64, f64)> = Vec::new();
-    let margin = frame.mean_scale();
-    let reach = outer.hypot(BAND_OUTER * half_width) + 2.0 * margin;
-    for r in 0..window.rows() {
-        for c in 0..window.columns() {
-            let middle = frame.offset(window.pixel(r, c));
-            let radius = middle.radius();
-            if radius > reach || radius < inner - 2.0 * margin {
-                continue;
-            }
-            let (mut in_strip, mut in_band) = (0u32, 0u32);
-            let turn = wrap_difference_deg(middle.position_angle_deg() - bearing(radius));
-            if radius * turn.to_radians().abs() > BAND_OUTER * half_width + 2.0 * margin
-                && radius > 2.0 * margin
-            {
-                continue;
-            }
-            for i in 0..PARTS {
-                for j in 0..PARTS {
-                    let part = |k: usize| (k as f64 + 0.5) / PARTS as f64 - 0.5;
-                    let mut at = window.pixel(r, c);
-                    at.x += part(i);
-                    at.y += part(j);
-                    let offset = frame.offset(at);
-                    let d = offset.radius();
-                    if d < inner || d >= outer {
-                        continue;
-                    }
-                    let turn = wrap_difference_deg(offset.position_angle_deg() - bearing(d));
-                    let across = d * turn.to_radians().abs();
-                    if turn.abs() >= 90.0 {
-                        continue;
-                    }
-                    if across <= half_width {
-                        in_strip += 1;
-                    } else if across >= BAND_INNER * half_width && across <= BAND_OUTER * half_width
-                    {
-                        in_band += 1;
-                    }
+/// A window's cells around the core in polar coordinates, by growing distance: made once,
+/// used by every strip.
+#[derive(Clone, Debug)]
+pub struct PolarCells {
+    cells: Vec<PolarCell>,
+}
+
+#[derive(Clone, Copy, Debug)]
+struct PolarCell {
+    row: usize,
+    column: usize,
+    radius: f64,
+    bearing_deg: f64,
+    /// Whether both this cell and the one opposite the core hold usable brightness.
+    pair_usable: bool,
+}
+
+impl PolarCells {
+    /// The cells within `reach` of the frame's origin.
+    pub fn around(window: &Window, frame: &LocalFrame, reach: f64) -> Self {
+        let mut cells = Vec::new();
+        for row in 0..window.rows() {
+            for column in 0..window.columns() {
+                let offset = frame.offset(window.pixel(row, column));
+                let radius = offset.radius();
+                if radius <= reach {
+                    let opposite = frame.pixel(offset.times(-1.0));
+                    let pair_usable = window.usable(row, column) && window.usable_nearest(opposite);
+                    let bearing_deg = offset.position_angle_deg();
+                    cells.push(PolarCell { row, column, radius, bearing_deg, pair_usable });
                 }
             }
-            let share = |n: u32| f64::from(n) / (PARTS * PARTS) as f64;
-            if in_strip + in_band == 0 {
-                continue;
-            }
-            if !window.usable(r, c) {
-                blank_area += share(in_strip);
-                continue;
-            }
-            let value = window.brightness[[r, c]];
-            strip_sum += share(in_strip) * value;
-            strip_area += share(in_strip);
-            band_sum += share(in_band) * value;
-            band_area += share(in_band);
-            cells.push((r, c, share(in_strip), share(in_band)));
         }
+        cells.sort_by(|a, b| a.radius.total_cmp(&b.radius));
+        Self { cells }
+    }
+
+    fn between(&self, low: f64, high: f64) -> &[PolarCell] {
+        let start = self.cells.partition_point(|c| c.radius < low);
+        let end = self.cells.partition_point(|c| c.radius <= high);
+        self.cells.get(start..end).unwrap_or(&[])
+    }
+}
+
+/// Sums a strip along bearings `bearing(d)` between two radial distances.
+///
+/// A pixel enters by its share inside the strip (25 points a pixel). Pixels that are blank or
+/// another source's, or whose place opposite the core is, are left out on both sides.
+fn sum_strip(
+    window: &Window,
+    frame: &LocalFrame,
+    around: &PolarCells,
+    bearing: &dyn Fn(f64) -> f64,
+    (inner, outer): (f64, f64),
+    half_width: f64,
+) -> StripFlux {
+    let mut strip = (0.0, 0.0);
+    let mut band = (0.0, 0.0);
+    let mut blank_area = 0.0;
+    let mut cells: Vec<(usize, usize, f64, f64)> = Vec::new();
+    let margin = frame.pixel_reach();
+    for cell in around.between(inner - 2.0 * margin, outer + 2.0 * margin) {
+        let turn = wrap_difference_deg(cell.bearing_deg - bearing(cell.radius));
+        let across = cell.radius * turn.to_radians().abs();
+        if across > BAND_OUTER * half_width + 2.0 * margin && cell.radius > 2.0 * margin {
+            continue;
+        }
+        let inside_ends = cell.radius >= inner + margin && cell.radius < outer - margin;
+        let whole = inside_ends && turn.abs() < 45.0 && cell.radius > 4.0 * margin;
+        let (in_strip, in_band) = if whole && across + margin <= half_width {
+            (1.0, 0.0)
+        } else if whole
+            && across - margin >= BAND_INNER * half_width
+            && across + margin <= BAND_OUTER * half_width
+        {
+            (0.0, 1.0)
+        } else {
+            shares(frame, window.pixel(cell.row, cell.column), bearing, (inner, outer), half_width)
+        };
+        if in_strip + in_band <= 0.0 {
+            continue;
+        }
+        if !cell.pair_usable {
+            blank_area += in_strip;
+            continue;
+        }
+        let value = window.brightness[[cell.row, cell.column]];
+        strip = (strip.0 + in_strip * value, strip.1 + in_strip);
+        band = (band.0 + in_band * value, band.1 + in_band);
+        cells.push((cell.row, cell.column, in_strip, in_band));
     }
     // Bands that hold less than a third of the strip's area say more noise than base.
-    let band_weight =
-        if band_area > 0.33 * strip_area && band_area > 0.0 { strip_area / band_area } else { 0.0 };
+    let band_weight = if band.1 > 0.33 * strip.1 && band.1 > 0.0 { strip.1 / band.1 } else { 0.0 };
     let weights = ApertureWeights::from_cells(
         cells.iter().map(|&(r, c, s, b)| (window.x0 + c, window.y0 + r, s - band_weight * b)),
     );
     StripFlux {
-        sum: strip_sum - band_weight * band_sum,
-        area_px: strip_area,
+        sum: strip.0 - band_weight * band.0,
+        area_px: strip.1,
         weights,
-        blank_fraction: blank_area / (blank_area + strip_area).max(f64::MIN_POSITIVE),
+        blank_fraction: blank_area / (blank_area + strip.1).max(f64::MIN_POSITIVE),
     }
+}
+
+/// Shares of a pixel's area inside a strip and inside the bands beside it.
+fn shares(
+    frame: &LocalFrame,
+    middle: Pixel,
+    bearing: &dyn Fn(f64) -> f64,
+    (inner, outer): (f64, f64),
+    half_width: f64,
+) -> (f64, f64) {
+    let (mut in_strip, mut in_band) = (0u32, 0u32);
+    let part = |k: usize| (k as f64 + 0.5) / PARTS as f64 - 0.5;
+    for i in 0..PARTS {
+        for j in 0..PARTS {
+            let offset = frame.offset(Pixel::new(middle.x + part(i), middle.y + part(j)));
+            let d = offset.radius();
+            if d < inner || d >= outer {
+                continue;
+            }
+            let turn = wrap_difference_deg(offset.position_angle_deg() - bearing(d));
+            if turn.abs() >= 90.0 {
+                continue;
+            }
+            let across = d * turn.to_radians().abs();
+            if across <= half_width {
+                in_strip += 1;
+            } else if across >= BAND_INNER * half_width && across <= BAND_OUTER * half_width {
+                in_band += 1;
+            }
+        }
+    }
+    let share = |n: u32| f64::from(n) / (PARTS * PARTS) as f64;
+    (share(in_strip), share(in_band))
 }
 
 /// The two strips' fluxes with their covariance matrix (map unit × pixels).
@@ -283,28 +332,37 @@ fn median_signal(ridge: &Ridge, inner: f64, outer: f64) -> f64 {
     crate::stats::median(&mut signal).unwrap_or(0.0)
 }
 
-/// Measures both sides in matched strips. `inflation` multiplies the noise (≥ 1: residuals
-/// near the core, structure beyond the correlation); `ends` are the radial ends, the whole
-/// strip's or those of a piece of it.
+impl StripPair {
+    /// The pair with its noise multiplied (≥ 1: residuals near the core, structure beyond the
+    /// correlation).
+    pub fn inflated(mut self, factor: f64) -> Self {
+        let square = factor * factor;
+        self.variance = self.variance.map(|v| v * square);
+        self.covariance *= square;
+        self
+    }
+}
+
+/// Measures both sides in matched strips between the radial `ends`, the whole strip's or
+/// those of a piece of it.
 pub fn measure_strips(
     window: &Window,
     frame: &LocalFrame,
+    around: &PolarCells,
     ridges: [&Ridge; 2],
     placed: &PlacedStrip,
     ends: (f64, f64),
     (noise, correlation): (&Noise, &NoiseCorrelation),
-    inflation: f64,
 ) -> StripPair {
     let fluxes = [0, 1].map(|side| {
         let bearing = |d: f64| placed.bearing(ridges, side, d);
-        sum_strip(window, frame, &bearing, ends.0, ends.1, placed.strip.half_width)
+        sum_strip(window, frame, around, &bearing, ends, placed.strip.half_width)
     });
-    let square = inflation * inflation;
     let variance = [0, 1].map(|k| {
-        fluxes[k].weights.as_ref().map_or(0.0, |w| square * correlation.aperture_variance(w, noise))
+        fluxes[k].weights.as_ref().map_or(0.0, |w| correlation.aperture_variance(w, noise))
     });
     let covariance = match (&fluxes[0].weights, &fluxes[1].weights) {
-        (Some(a), Some(b)) => square * correlation.aperture_covariance(a, b, noise),
+        (Some(a), Some(b)) => correlation.aperture_covariance(a, b, noise),
         _ => 0.0,
     };
     StripPair { fluxes, variance, covariance }
@@ -450,7 +508,7 @@ pub fn positive_upper_limit(flux: f64, sigma: f64, confidence: f64) -> f64 {
     // P(F < U | F ≥ 0) = confidence; with Q the upper tail: Q((U − f)/σ) = (1 − c) Q(−f/σ).
     let tail = (1.0 - confidence) * 0.5 * libm::erfc(-flux / sigma / std::f64::consts::SQRT_2);
     if tail > 1e-300 {
-        flux + sigma * normal_deviate(1.0 - tail)
+        flux - sigma * normal_deviate(tail)
     } else {
         // Far below zero the posterior is an exponential of scale σ²/|flux|.
         sigma * sigma / flux.abs() * -(1.0 - confidence).ln()

@@ -18,7 +18,7 @@ const LEAST_SIGMA: f64 = 0.03;
 /// Class from the ratio over the deconvolved size; `beams` is that size in beam majors.
 pub fn classify(ratio: Measurement, beams: Option<f64>) -> FrClass {
     let none = |class| FrClass { class, probability: BTreeMap::new() };
-    // Below three beams two features and the gap between them cannot all be seen.
+    // Below one and a half beams two features cannot be told apart.
     match beams {
         None => return none(FrClassName::Unresolved),
         Some(beams) if beams < 1.5 => return none(FrClassName::Unresolved),

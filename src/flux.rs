@@ -57,3 +57,49 @@ pub fn widened(
         mask.get(window.x0 + c, window.y0 + r) && !window.foreign[[r, c]]
     })
 }
+
+#[cfg(test)]
+mod tests {
+    use ndarray::Array2;
+
+    use super::*;
+
+    #[test]
+    fn a_sum_of_white_noise_has_root_n_and_the_background_adds() {
+        let n = 20;
+        let window = Window {
+            x0: 0,
+            y0: 0,
+            brightness: Array2::from_elem((n, n), 2.0),
+            rms: Array2::from_elem((n, n), 0.5),
+            member: Array2::from_elem((n, n), true),
+            foreign: Array2::from_elem((n, n), false),
+        };
+        let noise = Noise::uniform(n, n, 0.0, 0.5);
+        let white = NoiseCorrelation::white();
+        let sum = sum_where(&window, (&noise, &white), 1e30, |r, _| r < 10);
+        assert!((sum.value - 400.0).abs() < 1e-9 && (sum.area_px - 200.0).abs() < 1e-12);
+        // σ √N = 0.5 √200.
+        assert!((sum.sigma - 0.5 * 200f64.sqrt()).abs() < 1e-9, "{}", sum.sigma);
+        // A background known from 200 pixels is off by σ/√200 in each of the 200: as much again.
+        let unsure = sum_where(&window, (&noise, &white), 200.0, |r, _| r < 10);
+        assert!((unsure.sigma - sum.sigma * 2f64.sqrt()).abs() < 1e-9, "{}", unsure.sigma);
+    }
+
+    #[test]
+    fn neighbours_and_blanks_are_left_out() {
+        let mut window = Window {
+            x0: 3,
+            y0: 4,
+            brightness: Array2::from_elem((5, 5), 1.0),
+            rms: Array2::from_elem((5, 5), 1.0),
+            member: Array2::from_elem((5, 5), true),
+            foreign: Array2::from_elem((5, 5), false),
+        };
+        window.brightness[[0, 0]] = f64::NAN;
+        window.foreign[[1, 1]] = true;
+        let noise = Noise::uniform(10, 10, 0.0, 1.0);
+        let sum = sum_where(&window, (&noise, &NoiseCorrelation::white()), 1e30, |_, _| true);
+        assert!((sum.value - 23.0).abs() < 1e-12);
+    }
+}

@@ -2,7 +2,9 @@
 //! [`crate::assemble`]; no arithmetic here.
 
 use crate::assemble::{Findings, Strips, assemble, assemble_without_source};
-use crate::brightness::{PlacedStrip, StripRule, StripSide, measure_strips, place_strip};
+use crate::brightness::{
+    PlacedStrip, PolarCells, StripRule, StripSide, measure_strips, place_strip,
+};
 use crate::flags::{self, Flag};
 use crate::map::SkyMap;
 use crate::map::beam::Beam;
@@ -242,26 +244,20 @@ fn measure_sides(
         flags.push(Flag::new(flags::STRIP_NEAR_BRIGHT, &[("factor", near_factor)]));
     }
     let refs = [&ridges[0], &ridges[1]];
-    let whole = |inflation: f64| {
-        measure_strips(
-            &model.coreless,
-            &model.frame,
-            refs,
-            &placed,
-            (strip.inner, strip.outer),
-            (&observed.noise, &observed.correlation),
-            inflation,
-        )
+    let around = PolarCells::around(&model.coreless, &model.frame, strip.outer + 3.0 * scale);
+    let noise = (&observed.noise, &observed.correlation);
+    let measured = |ends: (f64, f64)| {
+        measure_strips(&model.coreless, &model.frame, &around, refs, &placed, ends, noise)
     };
-    let first = whole(1.0);
-    let structure = first.fluxes[0].weights.as_ref().map_or(1.0, |weights| {
+    let pair = measured((strip.inner, strip.outer));
+    let structure = pair.fluxes[0].weights.as_ref().map_or(1.0, |weights| {
         noise::structure_factor(map, &observed.noise, &observed.correlation, &grown, weights)
     });
     if structure > 1.0 {
         flags.push(Flag::new(flags::NOISE_STRUCTURED, &[("factor", structure)]));
     }
     let inflation = near_factor.max(structure);
-    let pair = whole(inflation);
+    let pair = pair.inflated(inflation);
     let blank = pair.fluxes.iter().map(|f| f.blank_fraction).fold(0.0, f64::max);
     if blank > 0.01 {
         flags.push(Flag::new(flags::STRIP_BLANKS, &[("fraction", blank)]));
@@ -272,16 +268,7 @@ fn measure_sides(
     let profile = (0..pieces)
         .map(|k| {
             let ends = (strip.inner + k as f64 * length, strip.inner + (k + 1) as f64 * length);
-            let piece = measure_strips(
-                &model.coreless,
-                &model.frame,
-                refs,
-                &placed,
-                ends,
-                (&observed.noise, &observed.correlation),
-                inflation,
-            );
-            (0.5 * (ends.0 + ends.1), piece)
+            (0.5 * (ends.0 + ends.1), measured(ends).inflated(inflation))
         })
         .collect();
     Some(Strips { placed, pair, profile, near_rms, blank_fraction: blank })

@@ -471,3 +471,139 @@ fn transverse_width(
     };
     (Measurement::symmetric(width, sigma), deconvolved)
 }
+
+#[cfg(test)]
+mod tests {
+    use ndarray::Array2;
+
+    use super::*;
+    use crate::map::description::{MapDescription, Rows};
+    use crate::map::geometry::SkyGeometry;
+    use crate::simulate::{GaussianShape, NoiseKind, unit_noise};
+    use crate::units::Pixel;
+
+    const SIZE: usize = 161;
+    const BEAM: f64 = 5.0;
+
+    fn frame() -> LocalFrame {
+        let description =
+            MapDescription { pixel_scale_arcsec: Some([1.0, 1.0]), ..MapDescription::default() };
+        SkyGeometry::new(SIZE, SIZE, &description, Rows::BottomUp)
+            .local_frame(Pixel::new(80.0, 80.0))
+    }
+
+    /// Two arms of beam-wide blobs along `bearing(side, d)`, of brightness `level(side, d)`.
+    fn window(
+        bearing: impl Fn(usize, f64) -> f64,
+        level: impl Fn(usize, f64) -> f64,
+        seed: Option<u64>,
+    ) -> Window {
+        let frame = frame();
+        let beam = Beam { major: BEAM, minor: BEAM, pa_deg: 0.0 };
+        let mut brightness: Array2<f64> = Array2::zeros((SIZE, SIZE));
+        for side in 0..2 {
+            for step in 4..110 {
+                let d = 0.5 * f64::from(step);
+                let at = frame.pixel(SkyOffset::polar(d, bearing(side, d)));
+                // Blobs half a pixel apart: 2 × 0.94 / b of them add up to the level.
+                let peak = level(side, d) * 0.5 / (1.064_467 * BEAM);
+                for ((r, c), value) in brightness.indexed_iter_mut() {
+                    *value +=
+                        peak * beam.profile(frame.difference(at, Pixel::new(c as f64, r as f64)));
+                }
+            }
+        }
+        let member = brightness.mapv(|b| b > 3.0);
+        if let Some(seed) = seed {
+            let kind = NoiseKind::Smoothed(GaussianShape::circular(BEAM));
+            brightness += &unit_noise(SIZE, SIZE, kind, seed);
+        }
+        Window {
+            x0: 0,
+            y0: 0,
+            rms: Array2::from_elem((SIZE, SIZE), 1.0),
+            foreign: Array2::from_elem((SIZE, SIZE), false),
+            member,
+            brightness,
+        }
+    }
+
+    fn traced(window: &Window) -> [Ridge; 2] {
+        let frame = frame();
+        let beam = Beam { major: BEAM, minor: BEAM, pa_deg: 0.0 };
+        let context = RidgeContext {
+            frame: &frame,
+            beam: &beam,
+            outline_sigma: 3.0,
+            hint_deg: None,
+            z_confidence: 1.645,
+        };
+        trace_ridges(window, &context)
+    }
+
+    /// The two ridges with the one nearer to a direction first.
+    fn nearer_first(ridges: [Ridge; 2], pa_deg: f64) -> [Ridge; 2] {
+        let apart = |r: &Ridge| wrap_difference_deg(r.bearing_at(20.0) - pa_deg).abs();
+        let [a, b] = ridges;
+        if apart(&a) <= apart(&b) { [a, b] } else { [b, a] }
+    }
+
+    #[test]
+    fn straight_arms_are_followed_at_their_bearing_and_width() {
+        // 30°, so that exchanged axes or a wrong handedness show.
+        let window = window(|side, _| 30.0 + 180.0 * side as f64, |_, _| 40.0, None);
+        let ridges = nearer_first(traced(&window), 30.0);
+        for (side, ridge) in ridges.iter().enumerate() {
+            assert!(ridge.detected);
+            let truth = 30.0 + 180.0 * side as f64;
+            for p in ridge.points.iter().filter(|p| (10.0..48.0).contains(&p.distance)) {
+                assert!(wrap_difference_deg(p.bearing_deg - truth).abs() < 0.2, "{p:?}");
+                assert!((p.brightness / 40.0 - 1.0).abs() < 0.02, "{}", p.brightness);
+                // A line seen through the beam is as wide as the beam, projected.
+                let width = p.width.best().expect("bright enough");
+                assert!((width / BEAM - 1.0).abs() < 0.02, "{width}");
+                assert!(matches!(p.width_deconvolved, Measurement::UpperLimit { .. }));
+            }
+            let end = ridge.points.last().expect("points").distance;
+            // 54.5 px, and the beam's reach at 40 rms down to 3: the last blob is a half-plane's
+            // edge, brightness 3 of 40 at 0.61 b beyond it.
+            assert!((end - 54.5 - 0.61 * BEAM).abs() < 2.0, "{end}");
+        }
+    }
+
+    #[test]
+    fn a_bend_of_forty_degrees_is_followed() {
+        let bent = |side: usize, d: f64| {
+            let turn = 40.0 * ((d - 10.0) / 40.0).clamp(0.0, 1.0);
+            100.0 + 180.0 * side as f64 + if side == 0 { turn } else { -turn }
+        };
+        let window = window(bent, |_, _| 25.0, Some(5));
+        let ridges = nearer_first(traced(&window), 100.0 + 10.0);
+        for (side, ridge) in ridges.iter().enumerate() {
+            for p in ridge.points.iter().filter(|p| (12.0..45.0).contains(&p.distance)) {
+                let off = wrap_difference_deg(p.bearing_deg - bent(side, p.distance));
+                let off_px = off.to_radians() * p.distance;
+                // A fifth of a beam: noise of S/N 25 and the smoothing over a beam.
+                assert!(off_px.abs() < 0.2 * BEAM, "side {side} at {}: {off_px}", p.distance);
+            }
+        }
+    }
+
+    #[test]
+    fn a_gap_does_not_end_a_ridge() {
+        let gap = |_: usize, d: f64| if (22.0..34.0).contains(&d) { 0.0 } else { 30.0 };
+        let window = window(|side, _| 200.0 + 180.0 * side as f64, gap, Some(6));
+        for ridge in traced(&window) {
+            assert!(ridge.points.last().expect("points").distance > 50.0);
+        }
+    }
+
+    #[test]
+    fn a_side_without_emission_is_not_detected_and_lies_opposite() {
+        let window = window(|_, _| 75.0, |side, _| if side == 0 { 30.0 } else { 0.0 }, Some(7));
+        let ridges = nearer_first(traced(&window), 75.0);
+        assert!(ridges[0].detected && !ridges[1].detected);
+        assert!(wrap_difference_deg(ridges[1].start_deg - 255.0).abs() < 5.0);
+        assert!(ridges[1].points.is_empty());
+    }
+}

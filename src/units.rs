@@ -83,7 +83,14 @@ impl SkyOffset {
 
 /// Wraps a directed angle into [0, 360).
 pub fn wrap_directed_deg(angle_deg: f64) -> f64 {
-    let wrapped = angle_deg.rem_euclid(360.0);
+    // One turn off is the usual case, and much cheaper than a division.
+    let wrapped = if (-360.0..0.0).contains(&angle_deg) {
+        angle_deg + 360.0
+    } else if (0.0..360.0).contains(&angle_deg) {
+        angle_deg
+    } else {
+        angle_deg.rem_euclid(360.0)
+    };
     // −1e-20 wraps to 360 exactly and −0.0 keeps its sign: both become 0.
     if wrapped < 360.0 { wrapped + 0.0 } else { 0.0 }
 }

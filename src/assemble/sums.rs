@@ -86,6 +86,10 @@ pub(super) fn sum_parts(findings: &Findings, order: [usize; 2]) -> Sums {
 /// The core's flux with noise error only.
 pub(super) fn core_flux_noise(findings: &Findings, units: &Units, sums: &Sums) -> Measurement {
     let core = &findings.model.core;
+    if findings.observed.beam.is_none() {
+        // The flux of a beam-shaped component is its peak times the beam's area.
+        return Measurement::missing(Because::NoBeam);
+    }
     match (core.fit, core.peak_upper) {
         (Some(fit), _) => {
             units.flux_noise(fit.peak * sums.beam_area_px, fit.peak_sigma * sums.beam_area_px)

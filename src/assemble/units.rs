@@ -25,7 +25,11 @@ impl Units {
         let factors = map.flux_factors(observed.beam.as_ref());
         Self {
             per_beam: factors.map(|f| f.mjy_per_beam).ok_or(because),
-            per_pixel: factors.map(|f| f.mjy_per_pixel).ok_or(because),
+            // A map in flux per pixel is summed without knowing the beam.
+            per_pixel: factors
+                .map(|f| f.mjy_per_pixel)
+                .or_else(|| map.mjy_per_pixel_without_beam())
+                .ok_or(because),
             scale_error: map.description.flux_scale_error_or_default().unwrap_or(0.0),
             has_scale: map.geometry.has_scale(),
             px_per_unit: 1.0 / map.geometry.mean_scale(),

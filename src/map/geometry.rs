@@ -81,6 +81,13 @@ impl LocalFrame {
         Pixel { x: self.origin.x + x, y: self.origin.y + y }
     }
 
+    /// Distance from a pixel's centre beyond which none of it lies, plane units.
+    pub fn pixel_reach(&self) -> f64 {
+        let column = self.to_sky[0][0].hypot(self.to_sky[1][0]);
+        let row = self.to_sky[0][1].hypot(self.to_sky[1][1]);
+        0.5 * (column + row)
+    }
+
     /// Sky offset from one pixel position to another.
     pub fn difference(&self, from: Pixel, to: Pixel) -> SkyOffset {
         let (east, north) = apply(&self.to_sky, to.x - from.x, to.y - from.y);

@@ -227,6 +227,11 @@ impl SkyMap {
         self.description.unit.and_then(BrightnessUnit::mjy_factor).is_some()
     }
 
+    /// mJy in one unit of the map summed over a pixel, for units that need no beam to say so.
+    pub fn mjy_per_pixel_without_beam(&self) -> Option<f64> {
+        self.description.unit.filter(|u| u.is_per_pixel()).and_then(BrightnessUnit::mjy_factor)
+    }
+
     /// Share of the usable pixels that sit at the floor at which the map was clipped; `None`
     /// for a map that was not.
     pub fn clipped_fraction(&self) -> Option<f64> {

@@ -345,3 +345,90 @@ fn gap_below(a: &Region, b: &Region, gap_px: f64) -> bool {
         })
     })
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::map::description::{MapDescription, Rows};
+    use crate::map::geometry::SkyGeometry;
+    use crate::regions::{Peak, PixelBox, Run};
+
+    const SIZE: usize = 300;
+    const BEAM: f64 = 4.0;
+
+    /// A square region of side 2 h + 1 about a pixel.
+    fn square(x: usize, y: usize, h: usize, peak: f64) -> Region {
+        let runs: Vec<Run> = (y - h..=y + h).map(|y| Run { y, x0: x - h, x1: x + h }).collect();
+        let area_px = runs.len() * (2 * h + 1);
+        Region {
+            area_px,
+            peak: Peak { x: x as f64, y: y as f64, value: peak, snr: peak },
+            peak_snr: peak,
+            sum: 0.3 * peak * area_px as f64,
+            centroid: (x as f64, y as f64),
+            bbox: PixelBox { x0: x - h, y0: y - h, x1: x + h, y1: y + h },
+            touches_edge: false,
+            touches_blank: false,
+            runs,
+        }
+    }
+
+    fn joined(regions: &[Region], is_known: bool) -> Option<Vec<usize>> {
+        let geometry = SkyGeometry::new(SIZE, SIZE, &MapDescription::default(), Rows::BottomUp);
+        let anchor = Anchor { pixel: Pixel::new(149.5, 149.5), is_known };
+        let frame = geometry.local_frame(anchor.pixel);
+        associate(regions, anchor, &frame, BEAM, (SIZE * SIZE) as f64).map(|s| s.members)
+    }
+
+    #[test]
+    fn two_lobes_around_an_empty_host_are_one_source() {
+        let regions =
+            [square(190, 160, 5, 40.0), square(111, 141, 5, 30.0), square(40, 250, 2, 20.0)];
+        assert_eq!(joined(&regions, true), Some(vec![0, 1]));
+    }
+
+    #[test]
+    fn a_neighbour_is_not_a_lobe_of_a_compact_host() {
+        // A core of 300 rms and one source of 20 rms to one side.
+        let regions = [square(149, 150, 3, 300.0), square(200, 170, 2, 20.0)];
+        assert_eq!(joined(&regions, true), Some(vec![0]));
+    }
+
+    #[test]
+    fn faint_pairs_around_a_very_bright_core_are_sidelobes() {
+        // Perfectly opposite and equal, but 0.5 % of the core's peak.
+        let regions =
+            [square(149, 150, 4, 2000.0), square(169, 150, 2, 10.0), square(130, 149, 2, 10.0)];
+        assert_eq!(joined(&regions, true), Some(vec![0]));
+        // The same pair at 10 % of a fainter core is a pair of lobes.
+        let regions =
+            [square(149, 150, 3, 100.0), square(179, 150, 3, 10.0), square(120, 149, 3, 10.0)];
+        assert_eq!(joined(&regions, true), Some(vec![0, 1, 2]));
+    }
+
+    #[test]
+    fn a_fragment_across_a_small_gap_belongs_and_one_across_a_wide_gap_does_not() {
+        // Gaps of 5 px = 1.25 beams and of 14 px = 3.5 beams.
+        let near = [square(149, 150, 5, 50.0), square(162, 150, 3, 8.0)];
+        assert_eq!(joined(&near, true), Some(vec![0, 1]));
+        let far = [square(149, 150, 5, 50.0), square(171, 150, 3, 8.0)];
+        assert_eq!(joined(&far, true), Some(vec![0]));
+    }
+
+    #[test]
+    fn nothing_near_a_known_host_is_no_source_but_the_middle_takes_the_nearest() {
+        let regions = [square(20, 20, 4, 50.0)];
+        assert_eq!(joined(&regions, true), None);
+        assert_eq!(joined(&regions, false), Some(vec![0]));
+        assert_eq!(joined(&[], false), None);
+    }
+
+    #[test]
+    fn combined_rank_is_the_distribution_of_a_product() {
+        // One rank: itself. Two: x (1 − ln x), closed form.
+        assert!((combined_rank(&[0.3]) - 0.3).abs() < 1e-15);
+        let x: f64 = 0.2 * 0.5;
+        assert!((combined_rank(&[0.2, 0.5]) - x * (1.0 - x.ln())).abs() < 1e-15);
+        assert!((combined_rank(&[1.0, 1.0, 1.0]) - 1.0).abs() < 1e-15);
+    }
+}

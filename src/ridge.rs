@@ -303,7 +303,7 @@ fn gain_or_zero(signal: f64) -> f64 {
 }
 
 /// Moves the path to the crest of each transverse profile, smooths it over a beam and keeps
-/// it to its last point above the outline threshold.
+/// it to its last crest above the outline threshold.
 fn crest_points(
     window: &Window,
     context: &RidgeContext,
@@ -314,8 +314,9 @@ fn crest_points(
     let on_circle = |distance: f64, bearing: f64| {
         window.cubic(context.frame.pixel(SkyOffset::polar(distance, bearing)))
     };
-    // Crest near the path on each circle: (distance, bearing, weight).
-    let raw: Vec<(f64, f64, f64)> = path
+    // Crest near the path on each circle: (distance, bearing, weight, whether it is a crest
+    // and not the flank of something beside the path).
+    let raw: Vec<(f64, f64, f64, bool)> = path
         .iter()
         .enumerate()
         .map(|(circle, &k)| {
@@ -327,15 +328,16 @@ fn crest_points(
             let crest = crest_of(&samples).map_or(0.0, |j| j - 4.0);
             let signal = polar.signal[circle][k];
             let weight = if signal.is_finite() { signal.clamp(0.0, 50.0) } else { 0.0 };
-            (distance, bearing + crest * fine_deg, weight)
+            (distance, bearing + crest * fine_deg, weight, crest.abs() < 3.5)
         })
         .collect();
     let half_window = 0.5 * beam.minor;
     let mut points = Vec::with_capacity(raw.len());
-    for &(distance, bearing, _) in &raw {
+    let mut last = 0;
+    for &(distance, bearing, _, is_crest) in &raw {
         let mut turn = 0.0;
         let mut total = 0.0;
-        for &(d, b, w) in &raw {
+        for &(d, b, w, _) in &raw {
             if (d - distance).abs() <= half_window {
                 let w = w + 1e-3;
                 turn += w * wrap_difference_deg(b - bearing);
@@ -346,6 +348,10 @@ fn crest_points(
         let offset = SkyOffset::polar(distance, bearing_deg);
         let at = context.frame.pixel(offset);
         let (Some(brightness), Some(rms)) = (window.cubic(at), window.rms_at(at)) else { continue };
+        let above = brightness >= context.outline_sigma * rms;
+        if is_crest && above && is_member(window, context.frame, offset) {
+            last = points.len() + 1;
+        }
         points.push(RidgePoint {
             distance,
             bearing_deg,
@@ -356,10 +362,7 @@ fn crest_points(
             width_deconvolved: Measurement::missing(Because::Unresolved),
         });
     }
-    let last = points.iter().rposition(|p| {
-        p.signal_to_noise() >= context.outline_sigma && is_member(window, context.frame, p.offset)
-    });
-    points.truncate(last.map_or(0, |k| k + 1));
+    points.truncate(last);
     for k in 0..points.len() {
         let direction = local_direction(&points, k);
         let (width, deconvolved) = transverse_width(window, context, &points[k], direction);

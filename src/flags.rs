@@ -96,6 +96,8 @@ flag_kinds! {
         "No compact component stands at the host's position: the host marks the core, its flux is an upper limit.";
     CORE_BLENDED = "core-blended", Note, "source",
         "Emission within one beam of the core is as bright as the core itself ({share} of the peak): the core's flux depends on how it was separated.";
+    COMPONENTS_UNSETTLED = "components-unsettled", Note, "components",
+        "The fit of {count} Gaussian components was stopped before it settled or before all emission was described: the source is too intricate; single components are rough.";
     EDGE = "source-leaves-map", Caution, "extent",
         "The source's contour reaches the edge of the map or a blank patch: sizes are lower limits and fluxes may be incomplete; use a larger map.";
     LARGE_SCALE_LOSS = "scale-near-limit", Caution, "extent",

@@ -26,6 +26,7 @@ pub mod assemble;
 pub mod brightness;
 pub mod class;
 pub mod cli;
+pub mod components;
 pub mod constants;
 pub mod contour;
 pub mod extent;

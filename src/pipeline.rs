@@ -5,6 +5,7 @@ use crate::assemble::{Findings, Strips, assemble, assemble_without_source};
 use crate::brightness::{
     PlacedStrip, PolarCells, StripRule, StripSide, measure_strips, place_strip,
 };
+use crate::components::{ComponentSettings, fit_components};
 use crate::flags::{self, Flag};
 use crate::map::SkyMap;
 use crate::map::beam::Beam;
@@ -85,6 +86,20 @@ pub fn measure(
     };
     flag_source(map, anchor, &chosen, &model, &mut flags);
     let strips = measure_sides(map, &observed, &model, settings, &mut flags);
+    let components = fit_components(
+        &model.window,
+        &model.peaks,
+        &observed.working_beam,
+        &model.frame,
+        (&observed.noise, &observed.correlation),
+        &ComponentSettings { confidence: settings.confidence, ..ComponentSettings::default() },
+    );
+    if components.truncated || !components.converged {
+        flags.push(Flag::new(
+            flags::COMPONENTS_UNSETTLED,
+            &[("count", components.components.len() as f64)],
+        ));
+    }
     let findings = Findings {
         map,
         name,
@@ -93,6 +108,7 @@ pub fn measure(
         chosen: &chosen,
         model: &model,
         strips,
+        components,
     };
     Ok(assemble(&findings, flags))
 }

@@ -1,6 +1,7 @@
 //! From what the stages found to the record: quantities formed, units put on, reasons given
 //! where there is no number. Every quantity is formed here or in the stage it names, once.
 
+mod parts;
 mod roles;
 mod shape;
 mod side;
@@ -10,6 +11,7 @@ mod units;
 
 use std::collections::BTreeMap;
 
+use self::parts::{component_records, component_separation, core_axes_mas};
 use self::roles::order_sides;
 use self::shape::{arms, fr_ratios, measure_extents};
 use self::side::side_record;
@@ -18,6 +20,7 @@ use self::sums::{brightest_region, core_flux, core_flux_noise, lobe_flux_ratio, 
 use self::units::Units;
 use crate::brightness::{PlacedStrip, StripPair};
 use crate::class::classify;
+use crate::components::FitReport;
 use crate::flags::{self, Flag};
 use crate::map::SkyMap;
 use crate::measurement::{Bare, Because, Measurement, OrMissing};
@@ -65,6 +68,8 @@ pub struct Findings<'a> {
     pub model: &'a SourceModel,
     /// Strips, where there is room.
     pub strips: Option<Strips>,
+    /// The fitted components.
+    pub components: FitReport,
 }
 
 /// Offset of a side's end: its hot spot, else its ridge's last point.
@@ -95,10 +100,7 @@ pub fn assemble_without_source(
         profile: Vec::new(),
         sidedness_sigma: Bare::missing(because),
     };
-    let physics = constrain_physics(
-        &physics_input(map, settings, none, none, none, none, [none; 2]),
-        &settings.cosmology,
-    );
+    let physics = constrain_physics(&physics_input(map, settings), &settings.cosmology);
     assumed_values(map, &mut flags);
     MapRecord {
         record_version: RECORD_VERSION,
@@ -168,9 +170,11 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     let core_flux = core_flux(findings, &units, &sums);
     let total = units.flux(sums.total.value, sums.total.sigma);
 
+    let components = component_records(findings, &units);
+    let core_px = model.core.pixel;
     let extents = measure_extents(findings);
     let size = extents.size;
-    let deconvolved = extents.deconvolved;
+    let deconvolved = units.deconvolved(extents.deconvolved);
     let sides = order.index.map(|k| side_record(findings, &units, &sums, k, order.role_of(k)));
     let [first_side, second_side] = sides;
     let arms = arms(findings, order.index);
@@ -180,15 +184,15 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
 
     let las_arcsec = units.arcsec(size);
     let physics = constrain_physics(
-        &physics_input(
-            map,
-            settings,
-            brightness.jet_to_counter_jet_ratio,
-            las_arcsec,
-            total,
-            core_flux,
-            [first_side.length_arcsec, second_side.length_arcsec],
-        ),
+        &PhysicsInput {
+            ratio: brightness.jet_to_counter_jet_ratio,
+            largest_angular_size_arcsec: las_arcsec,
+            total_flux_density_mjy: total,
+            core_flux_density_mjy: core_flux,
+            core_axes_mas: core_axes_mas(&components, core_px.is_some()),
+            side_length_arcsec: [first_side.length_arcsec, second_side.length_arcsec],
+            ..physics_input(map, settings)
+        },
         &settings.cosmology,
     );
     if !brightness.jet_to_counter_jet_ratio.is_missing() {
@@ -208,7 +212,6 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     let peak = if peak.0 > 0.0 { peak } else { brightest_region(findings) };
     let rms = if peak.1 > 0.0 { peak.0 / peak.1 } else { 0.0 };
     let near = findings.strips.as_ref().and_then(|s| s.near_rms);
-    let core_px = model.core.pixel;
     let status = if matches!(deconvolved, Measurement::UpperLimit { .. }) {
         Status::Unresolved
     } else {
@@ -228,7 +231,7 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         largest_angular_size_arcsec: las_arcsec,
         largest_angular_size_deconvolved_arcsec: units.arcsec(deconvolved),
         largest_size_px: units.px(size),
-        component_separation_arcsec: Measurement::missing(Because::NotImplemented),
+        component_separation_arcsec: units.arcsec(component_separation(findings)),
         position_angle_deg: arms.position_angle_deg,
         hotspot_separation_arcsec: units.arcsec(arms.hotspot_separation),
         fr_ratio: fr.whole,
@@ -242,7 +245,7 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         misalignment_deg: arms.misalignment_deg,
         bend_deg: arms.bend_deg,
         symmetry: Symmetry::Undecided,
-        axial_ratio: extents.axial_ratio,
+        axial_ratio: units.deconvolved(extents.axial_ratio),
         core_prominence: prominence,
         core_prominence_rest: map.description.redshift.map_or(
             Measurement::missing(Because::NoRedshift),
@@ -289,21 +292,15 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         },
         source,
         sides,
-        components: Vec::new(),
+        components,
         brightness,
         physics: physics.physics,
     }
 }
 
-fn physics_input(
-    map: &SkyMap,
-    settings: &Settings,
-    ratio: Measurement,
-    size: Measurement,
-    total: Measurement,
-    core: Measurement,
-    side_length_arcsec: [Measurement; 2],
-) -> PhysicsInput {
+/// What the description says; nothing measured yet.
+fn physics_input(map: &SkyMap, settings: &Settings) -> PhysicsInput {
+    let none = Measurement::missing(Because::NoSource);
     let d = &map.description;
     let (spectral_index, spectral_index_error) = d.jet_spectral_index();
     PhysicsInput {
@@ -316,12 +313,12 @@ fn physics_input(
         core_spectral_index: d.core_spectral_index_or_default(),
         total_spectral_index: d.total_spectral_index_or_default(),
         flow: settings.flow,
-        ratio,
-        largest_angular_size_arcsec: size,
-        total_flux_density_mjy: total,
-        core_flux_density_mjy: core,
+        ratio: none,
+        largest_angular_size_arcsec: none,
+        total_flux_density_mjy: none,
+        core_flux_density_mjy: none,
         core_axes_mas: None,
-        side_length_arcsec,
+        side_length_arcsec: [none; 2],
     }
 }
 

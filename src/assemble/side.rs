@@ -115,7 +115,7 @@ pub(super) fn side_record(
                 brightness_mjy_per_beam: units.brightness_noise(p.brightness, p.rms),
                 brightness_relative: p.brightness / peak,
                 width_arcsec: units.arcsec(p.width),
-                width_deconvolved_arcsec: units.arcsec(p.width_deconvolved),
+                width_deconvolved_arcsec: units.deconvolved(units.arcsec(p.width_deconvolved)),
             })
             .collect(),
     }

@@ -17,6 +17,8 @@ pub(super) struct Units {
     pub(super) has_scale: bool,
     /// Pixels per plane unit.
     pub(super) px_per_unit: f64,
+    /// The beam is given or was read off the noise.
+    pub(super) has_beam: bool,
 }
 
 impl Units {
@@ -33,6 +35,7 @@ impl Units {
             scale_error: map.description.flux_scale_error_or_default().unwrap_or(0.0),
             has_scale: map.geometry.has_scale(),
             px_per_unit: 1.0 / map.geometry.mean_scale(),
+            has_beam: observed.beam.is_some(),
         }
     }
 
@@ -83,6 +86,15 @@ impl Units {
             Bare::number(length, Because::OutOfDomain)
         } else {
             Bare::missing(Because::NoPixelScale)
+        }
+    }
+
+    /// What has the beam taken off, where the beam is known.
+    pub(super) fn deconvolved(&self, value: Measurement) -> Measurement {
+        if self.has_beam || value.is_missing() {
+            value
+        } else {
+            Measurement::missing(Because::NoBeam)
         }
     }
 

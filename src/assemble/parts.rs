@@ -1,0 +1,79 @@
+//! The fitted components in the record, and what follows from them.
+
+use super::units::Units;
+use super::{Findings, position};
+use crate::components::{Component, outermost_separation};
+use crate::measurement::{Because, Measurement};
+use crate::record::{ComponentRecord, ComponentRole, ShapeRecord};
+use crate::units::Pixel;
+
+/// A component within this many beam majors of the core or a hot spot is called after it.
+const SAME_PLACE_BEAMS: f64 = 0.6;
+
+/// Distance between the two outermost fitted components.
+pub(super) fn component_separation(findings: &Findings) -> Measurement {
+    outermost_separation(&findings.components.components, &findings.model.frame)
+        .map_or(Measurement::missing(Because::TooFewFeatures), |(separation, sigma, _)| {
+            Measurement::symmetric(separation, sigma)
+        })
+}
+
+/// The fitted components, brightest flux first.
+pub(super) fn component_records(findings: &Findings, units: &Units) -> Vec<ComponentRecord> {
+    let model = findings.model;
+    let near = SAME_PLACE_BEAMS * findings.observed.working_beam.major;
+    let nearest = |at: Pixel| {
+        let distance = |c: &Component| model.frame.separation(c.pixel, at);
+        let list = findings.components.components.iter().enumerate();
+        list.map(|(k, c)| (k, distance(c)))
+            .filter(|(_, d)| *d <= near)
+            .min_by(|a, b| a.1.total_cmp(&b.1))
+            .map(|(k, _)| k)
+    };
+    let core = model.core.fit.and_then(|fit| nearest(fit.pixel));
+    let hotspots: Vec<usize> = model
+        .sides
+        .iter()
+        .flat_map(|(_, features)| features)
+        .filter_map(|side| nearest(side.hotspot?.peak.pixel))
+        .collect();
+    findings
+        .components
+        .components
+        .iter()
+        .enumerate()
+        .map(|(k, c)| ComponentRecord {
+            role: if core == Some(k) {
+                ComponentRole::Core
+            } else if hotspots.contains(&k) {
+                ComponentRole::Hotspot
+            } else {
+                ComponentRole::Other
+            },
+            position: position(findings.map, c.pixel),
+            position_error_arcsec: units.bare_arcsec(c.position_sigma),
+            flux_density_mjy: units.flux(c.flux, c.flux_sigma),
+            peak_brightness_mjy_per_beam: units.brightness(c.peak, c.peak_sigma),
+            major_arcsec: units.arcsec(Measurement::symmetric(c.major.0, c.major.1)),
+            minor_arcsec: units.arcsec(Measurement::symmetric(c.minor.0, c.minor.1)),
+            position_angle_deg: Measurement::symmetric(c.pa_deg, c.pa_sigma_deg),
+            deconvolved: ShapeRecord {
+                major_arcsec: units.deconvolved(units.arcsec(c.deconvolved.major)),
+                minor_arcsec: units.deconvolved(units.arcsec(c.deconvolved.minor)),
+                position_angle_deg: units.deconvolved(c.deconvolved.position_angle_deg),
+            },
+        })
+        .collect()
+}
+
+/// Deconvolved axes of the component with role core, in mas; too few features where there
+/// is a core but the fit tells no component of its own there.
+pub(super) fn core_axes_mas(
+    components: &[ComponentRecord],
+    has_core: bool,
+) -> Option<[Measurement; 2]> {
+    let core = components.iter().find(|c| c.role == ComponentRole::Core);
+    let axes = core.map(|c| [c.deconvolved.major_arcsec, c.deconvolved.minor_arcsec]);
+    let unseparated = [Measurement::missing(Because::TooFewFeatures); 2];
+    axes.map(|axes| axes.map(|axis| axis.scaled(1000.0))).or(has_core.then_some(unseparated))
+}

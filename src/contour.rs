@@ -33,9 +33,10 @@ impl Polyline {
     }
 }
 
-/// The lines on which the map, interpolated linearly along the lines between neighbouring
-/// pixel centres, equals `level` (marching squares; Lorensen & Cline 1987 in two
-/// dimensions). A pixel equal to the level counts as above it. In a saddle the two pixels
+/// The lines on which the map equals `level` (marching squares; Lorensen & Cline 1987 in
+/// two dimensions). Points lie on the lines between neighbouring pixel centres, where the
+/// cubic through four pixels in a row meets the level: linear interpolation puts the faint
+/// contours of a source too far out, by 0.06 px at 2 % of a peak 5 px wide. A pixel equal to the level counts as above it. In a saddle the two pixels
 /// above are joined where the mean of the four reaches the level: a rule that does not
 /// depend on the orientation. Cells with a blank corner are skipped: the line is open
 /// there. `window` restricts the cells to those inside a box of pixels.
@@ -132,7 +133,9 @@ impl<'a> Tracer<'a> {
                     self.lower.1.get(x + 1),
                     self.lower.1.get(x),
                 );
-                let (Some(a), Some(b), Some(c), Some(d)) = corners else { continue };
+                let (Some(a), Some(b), Some(c), Some(d)) = corners else {
+                    continue;
+                };
                 self.cell(x, y, [*a, *b, *c, *d]);
             }
         }
@@ -166,20 +169,23 @@ impl<'a> Tracer<'a> {
     }
 
     fn point(&self, side: Side) -> Pixel {
+        let at = |offset: isize| {
+            let shifted = |v: usize| v.checked_add_signed(offset);
+            let (x, y) = if side.across {
+                (shifted(side.x), Some(side.y))
+            } else {
+                (Some(side.x), shifted(side.y))
+            };
+            x.zip(y).map_or(f64::NAN, |(x, y)| self.grid.value(x, y))
+        };
+        let four = [at(-1), at(0), at(1), at(2)].map(|v| v - self.level);
         let (x, y) = (side.x as f64, side.y as f64);
-        let start = self.grid.value(side.x, side.y);
-        let end = if side.across {
-            self.grid.value(side.x + 1, side.y)
-        } else {
-            self.grid.value(side.x, side.y + 1)
-        };
         // From the pixel above the level: the same number from either direction.
-        let t = if start >= end {
-            (start - self.level) / (start - end)
+        let t = if four[1] >= four[2] {
+            crossing(four)
         } else {
-            1.0 - (end - self.level) / (end - start)
+            1.0 - crossing([four[3], four[2], four[1], four[0]])
         };
-        let t = if t.is_finite() { t.clamp(0.0, 1.0) } else { 0.5 };
         if side.across { Pixel::new(x + t, y) } else { Pixel::new(x, y + t) }
     }
 
@@ -253,6 +259,42 @@ impl<'a> Tracer<'a> {
         }
         lines
     }
+}
+
+/// Where the polynomial through values at −1, 0, 1 and 2 falls through zero between 0 and
+/// 1, given a value ≥ 0 at 0 and < 0 at 1. A missing outer value lowers the degree.
+fn crossing([before, start, end, after]: [f64; 4]) -> f64 {
+    // Newton's form about 0 and 1: the linear part, plus t (t − 1) times (c + d t).
+    let (c, d) = match (before.is_nan(), after.is_nan()) {
+        (true, true) => (0.0, 0.0),
+        (false, true) => (0.5 * (before - 2.0 * start + end), 0.0),
+        (true, false) => (0.5 * (start - 2.0 * end + after), 0.0),
+        (false, false) => {
+            let (first, second) = (before - 2.0 * start + end, start - 2.0 * end + after);
+            // Curvature runs from the first to the second: c + d t with d = Δ/6.
+            ((2.0 * first + second) / 6.0, (second - first) / 6.0)
+        }
+    };
+    let value = |t: f64| start + t * (end - start) + t * (t - 1.0) * (c + d * t);
+    let (mut low, mut high) = (0.0, 1.0);
+    let mut t = start / (start - end);
+    for _ in 0..60 {
+        let v = value(t);
+        if v >= 0.0 {
+            low = t;
+        } else {
+            high = t;
+        }
+        // A Newton step where it stays inside, else the middle.
+        let slope = (end - start) + (2.0 * t - 1.0) * (c + d * t) + t * (t - 1.0) * d;
+        let next = t - v / slope;
+        let next = if next > low && next < high { next } else { 0.5 * (low + high) };
+        if (next - t).abs() < 1e-14 || high - low < 1e-14 {
+            break;
+        }
+        t = next;
+    }
+    if t.is_finite() { t.clamp(0.0, 1.0) } else { 0.5 }
 }
 
 /// A linear map from pixel offsets to offsets on the sky: (m₀₀ dx + m₀₁ dy, m₁₀ dx + m₁₁ dy).

@@ -44,6 +44,19 @@ pub fn resolution_limit(fwhm: f64, signal_to_noise: f64) -> f64 {
     fwhm * (4.0 * std::f64::consts::LN_2 / std::f64::consts::PI * (snr / (snr - 1.0)).ln()).sqrt()
 }
 
+/// 1σ per axis of a point's position from noise alone: 0.60 FWHM over S/N, the linear error
+/// of an unweighted fit in noise smoothed by the beam.
+pub fn position_sigma(beam_fwhm: f64, signal_to_noise: f64) -> f64 {
+    0.60 * beam_fwhm / signal_to_noise.max(1.0)
+}
+
+/// 1σ per axis of a peak's position in extended emission: noise, and a twentieth of the beam
+/// for the slope it stands on, which moves a maximum whatever its S/N (a floor of up to a
+/// tenth of the beam is common practice).
+pub fn feature_sigma(beam_fwhm: f64, signal_to_noise: f64) -> f64 {
+    position_sigma(beam_fwhm, signal_to_noise).hypot(0.05 * beam_fwhm)
+}
+
 impl Extent {
     /// Measures an extent between two contour points.
     ///
@@ -111,7 +124,8 @@ impl Extent {
         if cut_off {
             return Measurement::lower_limit(value.max(0.0), confidence);
         }
-        if value > resolution.max(2.0 * sigma) {
+        // The longest chord of a noisy contour is biased outwards: two errors are not enough.
+        if value > resolution.max(3.0 * sigma) {
             Measurement::symmetric(value, sigma)
         } else {
             Measurement::upper_limit((value.max(0.0) + z * sigma).max(resolution), confidence)

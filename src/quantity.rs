@@ -259,7 +259,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "",
         Angle,
         "Distance between the two hot spots.",
-        "distance of the peaks' sub-pixel positions",
+        "distance of the peaks' sub-pixel positions; error per peak: noise and a twentieth of the beam",
         PRACTICE,
     ),
     quantity(

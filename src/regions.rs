@@ -142,24 +142,35 @@ pub(crate) fn groups_above(
     both_signs: bool,
 ) -> Vec<Vec<Run>> {
     let (mut values, mut background, mut rms) = (Vec::new(), Vec::new(), Vec::new());
+    let mut heights: Vec<u8> = Vec::new();
     connected_runs(grid.rows(), |y, found| {
         grid.row_into(y, &mut values);
         noise.row_into(y, &mut background, &mut rms);
-        let mut open: Option<(usize, bool)> = None;
+        // 0 below the outline, 1 above it, 2 above the detection threshold.
+        heights.clear();
         let row = values.iter().zip(&background).zip(&rms);
-        for (x, ((value, background), rms)) in row.enumerate() {
+        heights.extend(row.map(|((value, background), rms)| {
             let signal = value - background;
             let signal = if both_signs { signal.abs() } else { signal };
-            if signal >= outline * rms {
-                let strong = signal >= detection * rms;
-                let (start, seen) = open.unwrap_or((x, false));
-                open = Some((start, seen || strong));
-            } else if let Some((start, seen)) = open.take() {
-                found.push((Run { y, x0: start, x1: x - 1 }, seen));
+            u8::from(signal >= outline * rms) + u8::from(signal >= detection * rms)
+        }));
+        let mut x = 0;
+        while let Some(rest) = heights.get(x..) {
+            // Empty sky is skipped eight pixels at a time.
+            if rest.first_chunk::<8>().is_some_and(|eight| u64::from_ne_bytes(*eight) == 0) {
+                x += 8;
+                continue;
             }
-        }
-        if let Some((start, seen)) = open {
-            found.push((Run { y, x0: start, x1: values.len().saturating_sub(1) }, seen));
+            match rest.iter().position(|h| *h > 0) {
+                None => break,
+                Some(skip) if skip > 0 => x += skip,
+                Some(_) => {
+                    let length = rest.iter().position(|h| *h == 0).unwrap_or(rest.len());
+                    let strong = rest.iter().take(length).any(|h| *h > 1);
+                    found.push((Run { y, x0: x, x1: x + length - 1 }, strong));
+                    x += length;
+                }
+            }
         }
     })
 }
@@ -270,7 +281,7 @@ fn describe(grid: &dyn Grid, noise: &Noise, runs: Vec<Run>) -> Option<Region> {
     let touches_edge =
         bbox.x0 == 0 || bbox.y0 == 0 || bbox.x1 + 1 >= columns || bbox.y1 + 1 >= rows;
     let finite = [value, snr, sum, centroid.0, centroid.1, peak_snr].iter().all(|v| v.is_finite());
-    finite.then(|| Region {
+    finite.then_some(Region {
         runs,
         area_px,
         peak: Peak { x, y, value, snr },
@@ -324,7 +335,7 @@ pub fn local_maxima(
             let value = grid.value(x, run.y);
             let (fx, fy) = (x as f64, run.y as f64);
             let enough = value - noise.background(fx, fy) >= minimum_snr * noise.rms(fx, fy);
-            if enough && neighbours(grid, x, run.y).all(|other| !(other > value)) {
+            if enough && !neighbours(grid, x, run.y).any(|other| other > value) {
                 candidates.push((x, run.y, value));
             }
         }
@@ -408,7 +419,9 @@ fn neighbours(grid: &dyn Grid, x: usize, y: usize) -> impl Iterator<Item = f64> 
 /// Sub-pixel top: least-squares paraboloid through 3 × 3 pixels.
 fn refine(grid: &dyn Grid, noise: &Noise, x: usize, y: usize) -> (f64, f64, f64) {
     let centre = (x as f64, y as f64, grid.value(x, y));
-    let (Some(left), Some(top)) = (x.checked_sub(1), y.checked_sub(1)) else { return centre };
+    let (Some(left), Some(top)) = (x.checked_sub(1), y.checked_sub(1)) else {
+        return centre;
+    };
     let background = noise.background(centre.0, centre.1);
     let floor = 3.0 * noise.rms(centre.0, centre.1);
     let mut patch = [[0.0; 3]; 3];

@@ -248,7 +248,7 @@ fn iterate_clip(
         if !(next.mean.is_finite() && next.rms.is_finite()) {
             return None;
         }
-        let still = shift.abs() <= 1e-4 * sigma && (next.rms - sigma).abs() <= 1e-4 * sigma;
+        let still = shift.abs() <= 5e-4 * sigma && (next.rms - sigma).abs() <= 5e-4 * sigma;
         result = Some(next);
         if still || next.rms <= 0.0 {
             break;

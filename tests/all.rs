@@ -1,8 +1,10 @@
-//! Integration tests: one binary, so that the library is linked once.
+//! Integration tests, in one binary.
 
 mod cli;
+mod demo;
 mod hostile;
 mod invariance;
 mod published;
 mod schema;
 mod support;
+mod truth;

@@ -183,8 +183,8 @@ pub struct ApertureScatter {
     pub scatter: f64,
     /// Median of the same sums: what the background model leaves.
     pub median: f64,
-    /// Number of places; the scatter of n independent ones is known to about 0.8/√n... of
-    /// itself times 1.5 (a median absolute deviation).
+    /// Number of places. The scatter from n independent ones is known to 1.17/√n of itself
+    /// (a median absolute deviation); places that overlap are not independent.
     pub placements: usize,
 }
 
@@ -253,22 +253,28 @@ pub fn aperture_scatter(
 fn places(room_x: usize, room_y: usize, most: usize) -> (Vec<usize>, Vec<usize>) {
     let cells = (room_x + 1) as f64 * (room_y + 1) as f64;
     let spacing = (cells / most.max(1) as f64).sqrt().max(1.0);
-    let line = |room: usize| -> Vec<usize> {
-        let mut count = (((room + 1) as f64 / spacing).floor() as usize).clamp(1, room + 1);
-        if count == 1 && room > 0 {
-            return if room % 2 == 0 { vec![room / 2] } else { vec![room / 2, room / 2 + 1] };
-        }
-        if count % 2 == 1 && room % 2 == 1 && count > 1 {
-            count -= 1;
-        }
-        let steps = (count - 1).max(1);
-        (0..count)
-            .map(|k| {
-                if 2 * k < count { k * room / steps } else { room - (count - 1 - k) * room / steps }
-            })
-            .collect()
-    };
-    (line(room_x), line(room_y))
+    let along = |room: usize| (((room + 1) as f64 / spacing).floor() as usize).clamp(1, room + 1);
+    let (mut count_x, mut count_y) = (along(room_x), along(room_y));
+    // A narrow room leaves its share of places to the other axis.
+    if count_x == 1 {
+        count_y = most.clamp(1, room_y + 1);
+    } else if count_y == 1 {
+        count_x = most.clamp(1, room_x + 1);
+    }
+    (symmetric_places(room_x, count_x), symmetric_places(room_y, count_y))
+}
+
+/// About `count` offsets from 0 to `room`, evenly spread and symmetric about the middle.
+fn symmetric_places(room: usize, count: usize) -> Vec<usize> {
+    if count <= 1 {
+        let middle = [room / 2, room - room / 2];
+        return if room.is_multiple_of(2) { vec![middle[0]] } else { middle.to_vec() };
+    }
+    // An odd number of places needs one in the middle.
+    let count = if count % 2 == 1 && room % 2 == 1 { count - 1 } else { count };
+    let steps = (count - 1).max(1);
+    let lower = |k: usize| k * room / steps;
+    (0..count).map(|k| if 2 * k < count { lower(k) } else { room - lower(count - 1 - k) }).collect()
 }
 
 /// Places an aperture is laid on at the most to see structure.
@@ -294,5 +300,6 @@ pub fn structure_factor(
         _ => 1.0,
     }
 }
+
 #[cfg(test)]
 mod tests;

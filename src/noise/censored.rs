@@ -59,11 +59,19 @@ pub(super) fn estimate(
         if round == 0 && gap_above(&above, floor, step) {
             return Err(hidden);
         }
-        let upper = if round == 0 { share + 0.6 * (1.0 - share) } else { 0.99 };
-        let fit = if step > 0.0 {
+        // Emission is not masked yet in the first round. Steps may be few: all are needed.
+        let upper = match round {
+            0 => share + 0.6 * (1.0 - share),
+            _ if step > 0.0 => 0.999,
+            _ => 0.99,
+        };
+        let emission_rules = share > MOST_AT_FLOOR || heavy_tail(&above, floor + 0.5 * step, step);
+        let fit = if round == 0 && emission_rules {
+            None
+        } else if step > 0.0 {
             fit_steps(&above, at_floor, floor, step, upper)
         } else {
-            (share <= MOST_AT_FLOOR).then(|| fit_quantiles(&above, at_floor, upper)).flatten()
+            fit_quantiles(&above, at_floor, upper)
         };
         let (level, rms) = match fit {
             Some((level, rms)) if rms > lowest_rms => (level, rms),
@@ -145,7 +153,7 @@ fn fit_steps(
     for k in 0..4000 {
         let edge = floor + (f64::from(k) + 0.5) * step;
         let share = (at_floor + above.partition_point(|v| *v <= edge)) as f64 / total;
-        if share > upper.max(0.9) || share >= 1.0 - 2.0 / total {
+        if share > upper || share >= 1.0 - 2.0 / total {
             break;
         }
         if share * total >= 3.0 {
@@ -154,7 +162,32 @@ fn fit_steps(
             edges.push((q, edge, density * density / (share * (1.0 - share))));
         }
     }
-    if edges.len() < 2 { None } else { line(edges.into_iter()) }
+    match edges[..] {
+        // One edge alone: the background is taken to be the floor, and an rms above the
+        // step would have shown more edges.
+        [(q, edge, _)] if q > 0.0 => Some((floor, ((edge - floor) / q).min(step))),
+        [_, _, ..] => line(edges.into_iter()),
+        _ => None,
+    }
+}
+
+/// Whether the values above the floor are spread like emission (about evenly in the
+/// logarithm) and not like the upper part of noise: there, the distance of the 30 % point
+/// from the edge is 2.0 to 2.2 times that of the 15 % point, whatever was cut off.
+fn heavy_tail(above: &[f64], edge: f64, step: f64) -> bool {
+    // Rounded values are spread evenly over their step.
+    let spread = |q: f64| -> Option<f64> {
+        let rank = (q * above.len() as f64) as usize;
+        let value = *above.get(rank)?;
+        let (low, high) =
+            (above.partition_point(|v| *v < value), above.partition_point(|v| *v <= value));
+        let place = (rank - low) as f64 + 0.5;
+        Some(value - edge + step * (place / (high - low).max(1) as f64 - 0.5))
+    };
+    match (spread(0.15), spread(0.3)) {
+        (Some(first), Some(second)) => second > 2.6 * first,
+        _ => true,
+    }
 }
 
 /// Weighted straight line value = level + rms · q, as (level, rms).
@@ -168,7 +201,7 @@ fn line(points: impl Iterator<Item = (f64, f64, f64)>) -> Option<(f64, f64)> {
         qv += weight * x * y;
     }
     let determinant = w * qq - q * q;
-    if !(determinant > 1e-12 * w * qq) {
+    if determinant.is_nan() || determinant <= 1e-12 * w * qq {
         return None;
     }
     let rms = (w * qv - q * v) / determinant;

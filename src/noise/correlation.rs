@@ -11,15 +11,15 @@ use crate::grid::{Grid, PixelMask};
 const STEPS_PER_RMS: f64 = 512.0;
 /// Residuals beyond this many rms are cut to it.
 const CUT_SIGMA: f64 = 4.0;
-/// Pixels per chunk whose products fit 32 bits: 256 (4 · 512)² < 2³¹.
-const CHUNK: usize = 256;
+/// Pixels whose products fit 32 bits together: 496 (4 · 512)² < 2³¹.
+const CHUNK: usize = 496;
 
 /// How the correlation is measured.
 #[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize, JsonSchema)]
 #[serde(default)]
 pub struct CorrelationSettings {
-    /// Largest lag in beam majors. Default 3 (2 where the beam is wider than 8 px): the
-    /// correlation of an ideal map is below 10⁻⁴ from 2.6 on.
+    /// Largest lag in beam majors. Default 2.4, where the correlation of an ideal map is
+    /// 3·10⁻⁴ (2 where the beam is wider than 10 px: 4·10⁻³).
     pub reach_beams: f64,
     /// Largest lag where the beam is not known, in pixels. Default 16.
     pub unknown_beam_reach_px: usize,
@@ -30,7 +30,7 @@ pub struct CorrelationSettings {
 
 impl Default for CorrelationSettings {
     fn default() -> Self {
-        Self { reach_beams: 3.0, unknown_beam_reach_px: 16, window_px: 300 }
+        Self { reach_beams: 2.4, unknown_beam_reach_px: 16, window_px: 300 }
     }
 }
 
@@ -46,14 +46,27 @@ pub struct KernelEllipse {
     pub angle_deg: f64,
 }
 
+impl KernelEllipse {
+    /// The correlation of white noise smoothed with this kernel: a Gaussian √2 as wide,
+    /// 0 where it is below 10⁻⁶.
+    fn correlation(&self, dx: isize, dy: isize) -> f64 {
+        let (sin, cos) = libm::sincos(self.angle_deg.to_radians());
+        let (dx, dy) = (dx as f64, dy as f64);
+        let u = (dx * cos + dy * sin) / self.major_px;
+        let v = (dy * cos - dx * sin) / self.minor_px;
+        let c = libm::exp(-2.0 * std::f64::consts::LN_2 * (u * u + v * v));
+        if c > 1e-6 { c } else { 0.0 }
+    }
+}
+
 /// The noise's autocorrelation, 1 at lag 0.
 ///
 /// Measured coefficients of far lags are mostly sampling noise, and a large aperture sums
 /// hundreds of them. So a variance uses: the measured values in the core (the lags joined
 /// to 0 in which the correlation exceeds twice its error, and their neighbours); outside,
 /// single lags beyond 4 errors, and means over a row or column of lags beyond 4 errors
-/// (stripes); 0 elsewhere. The error of a coefficient is √(Σ C² / pairs) (Bartlett 1946).
-/// Structure wider than the largest lag is not seen: [`super::aperture_scatter`] is.
+/// (stripes); elsewhere the tail of the Gaussian fitted to the core, or 0 where none fits.
+/// The error of a coefficient is √(Σ C² / pairs) (Bartlett 1946). Structure wider than the largest lag is not seen: [`super::aperture_scatter`] is.
 #[derive(Clone, Debug, PartialEq)]
 pub struct NoiseCorrelation {
     reach: usize,
@@ -80,16 +93,7 @@ impl NoiseCorrelation {
             return Self::white();
         }
         let reach = (2.7 * kernel.major_px).ceil().max(1.0) as usize;
-        let (sin, cos) = libm::sincos(kernel.angle_deg.to_radians());
-        let half = 2.0 * std::f64::consts::LN_2;
-        let values = lags(reach)
-            .map(|(dx, dy)| {
-                let (dx, dy) = (dx as f64, dy as f64);
-                let u = (dx * cos + dy * sin) / kernel.major_px;
-                let v = (dy * cos - dx * sin) / kernel.minor_px;
-                libm::exp(-half * (u * u + v * v))
-            })
-            .collect();
+        let values = lags(reach).map(|(dx, dy)| kernel.correlation(dx, dy)).collect();
         let mut out = Self::from_measured(reach, values, &[], usize::MAX);
         out.kernel = Some(kernel);
         out
@@ -97,10 +101,11 @@ impl NoiseCorrelation {
 
     /// `pairs` per lag (empty: exact values, everything is kept).
     fn from_measured(reach: usize, measured: Vec<f64>, pairs: &[f64], samples: usize) -> Self {
+        let kernel = fit_kernel(reach, &measured);
         let (kept, error) = if pairs.is_empty() {
             (measured.clone(), 0.0)
         } else {
-            significant(reach, &measured, pairs)
+            significant(reach, &measured, pairs, kernel)
         };
         let sum = symmetric_sum(&kept);
         let lags = lags(reach)
@@ -108,7 +113,6 @@ impl NoiseCorrelation {
             .filter(|((dx, dy), c)| (*dy, *dx) > (0, 0) && c.abs() > 0.0)
             .map(|((dx, dy), c)| (dx, dy, *c))
             .collect();
-        let kernel = fit_kernel(reach, &measured);
         Self { reach, measured, kept, lags, sum, error, kernel, samples }
     }
 
@@ -191,7 +195,9 @@ pub fn measure_correlation(
 ) -> NoiseCorrelation {
     let (columns, rows) = (grid.columns(), grid.rows());
     let reach = match beam_major_px.filter(|b| b.is_finite() && *b > 0.0) {
-        Some(beam) if beam <= 8.0 => (settings.reach_beams * beam).ceil().clamp(8.0, 24.0) as usize,
+        Some(beam) if beam <= 10.0 => {
+            (settings.reach_beams * beam).ceil().clamp(8.0, 24.0) as usize
+        }
         Some(beam) => (2.0 * beam).ceil().clamp(24.0, 60.0) as usize,
         None => settings.unknown_beam_reach_px.clamp(1, 60),
     };
@@ -199,7 +205,7 @@ pub fn measure_correlation(
     let count = (2 * reach + 1) * (2 * reach + 1) / 2 + 1;
     let mut side = ((5e7 / count as f64).sqrt() as usize).clamp(160, settings.window_px.max(160));
     loop {
-        let window = Window::load(grid, noise, mask, side);
+        let window = Window::load(grid, noise, mask, side, reach);
         let whole = side >= columns && side >= rows;
         if window.usable >= 20_000.min(side * side / 3) || whole || side > 4000 {
             if window.usable < 200 || reach == 0 {
@@ -216,13 +222,18 @@ struct Window {
     columns: usize,
     rows: usize,
     values: Vec<i16>,
+    /// Columns rounded up to a multiple of 16, and the distance from row to row.
+    padded: usize,
+    stride: usize,
     words: usize,
     bits: Vec<u64>,
     usable: usize,
+    /// Rows in which every pixel is usable.
+    whole: Vec<bool>,
 }
 
 impl Window {
-    fn load(grid: &dyn Grid, noise: &Noise, mask: &PixelMask, side: usize) -> Self {
+    fn load(grid: &dyn Grid, noise: &Noise, mask: &PixelMask, side: usize, reach: usize) -> Self {
         let centred = |size: usize| {
             if size <= side {
                 (0, size)
@@ -232,14 +243,18 @@ impl Window {
         };
         let ((left, columns), (top, rows)) = (centred(grid.columns()), centred(grid.rows()));
         let words = columns.div_ceil(64) + 1;
-        let mut values = vec![0i16; columns * rows];
+        let padded = columns.next_multiple_of(16);
+        let stride = padded + reach;
+        let mut values = vec![0i16; stride * rows];
         let mut bits = vec![0u64; words * rows];
         let mut usable = 0;
+        let mut whole = Vec::with_capacity(rows);
         let (mut row, mut background, mut rms) = (Vec::new(), Vec::new(), Vec::new());
         for y in 0..rows {
             grid.row_into(top + y, &mut row);
             noise.row_into(top + y, &mut background, &mut rms);
             let masked = mask.row(top + y);
+            let before = usable;
             for x in 0..columns {
                 let at = left + x;
                 let (Some(value), Some(level), Some(rms)) =
@@ -252,12 +267,13 @@ impl Window {
                     continue;
                 }
                 let cut = signal.clamp(-CUT_SIGMA, CUT_SIGMA);
-                values[y * columns + x] = (cut * STEPS_PER_RMS).round() as i16;
+                values[y * stride + x] = (cut * STEPS_PER_RMS).round() as i16;
                 bits[y * words + x / 64] |= 1 << (x % 64);
                 usable += 1;
             }
+            whole.push(usable - before == columns);
         }
-        Self { columns, rows, values, words, bits, usable }
+        Self { columns, rows, values, padded, stride, words, bits, usable, whole }
     }
 
     /// Sum of products and number of pairs at a lag with dy ≥ 0.
@@ -265,12 +281,14 @@ impl Window {
         let shift = dx.unsigned_abs();
         let width = self.columns.saturating_sub(shift);
         let (a0, b0) = if dx >= 0 { (0, shift) } else { (shift, 0) };
-        let full = self.usable == self.columns * self.rows;
         let (mut sum, mut pairs) = (0i64, 0u64);
         for y in 0..self.rows.saturating_sub(dy) {
-            let (a, b) = (y * self.columns + a0, (y + dy) * self.columns + b0);
-            sum += dot(&self.values[a..a + width], &self.values[b..b + width]);
-            if !full {
+            // Beyond the window a row holds zeros: its whole length can be summed.
+            let (a, b) = (y * self.stride + a0, (y + dy) * self.stride + b0);
+            sum += dot(&self.values[a..a + self.padded], &self.values[b..b + self.padded]);
+            if self.whole[y] && self.whole[y + dy] {
+                pairs += width as u64;
+            } else {
                 let (low, high) =
                     (&self.bits[y * self.words..], &self.bits[(y + dy) * self.words..]);
                 // The row whose pixels lie further right is shifted down onto the other.
@@ -278,8 +296,7 @@ impl Window {
                 pairs += common_bits(&still[..self.words], &moved[..self.words], shift);
             }
         }
-        let pairs = if full { (width * self.rows.saturating_sub(dy)) as f64 } else { pairs as f64 };
-        (sum, pairs)
+        (sum, pairs as f64)
     }
 
     fn correlate(&self, reach: usize) -> NoiseCorrelation {
@@ -287,7 +304,7 @@ impl Window {
         let mut pairs = vec![0.0; values.len()];
         let (zero, count) = self.pair_sums(0, 0);
         let power = zero as f64 / count.max(1.0);
-        if !(power > 0.0) {
+        if power.is_nan() || power <= 0.0 {
             return NoiseCorrelation::white();
         }
         for (dx, dy) in lags(reach).filter(|(dx, dy)| (*dy, *dx) >= (0, 0)) {
@@ -301,7 +318,7 @@ impl Window {
             }
         }
         // Taking off the mean of N pixels lowers every coefficient by ΣC/N.
-        let (kept, _) = significant(reach, &values, &pairs);
+        let (kept, _) = significant(reach, &values, &pairs, fit_kernel(reach, &values));
         let bias = (symmetric_sum(&kept) / self.usable as f64).clamp(0.0, 0.1);
         for value in &mut values {
             *value = (*value + bias) / (1.0 + bias);
@@ -310,15 +327,17 @@ impl Window {
     }
 }
 
-/// Exact sum of products.
+/// Exact sum of products of two slices of equal length.
 fn dot(a: &[i16], b: &[i16]) -> i64 {
-    a.chunks(CHUNK)
-        .zip(b.chunks(CHUNK))
-        .map(|(a, b)| {
-            let sum: i32 = a.iter().zip(b).map(|(a, b)| i32::from(*a) * i32::from(*b)).sum();
-            i64::from(sum)
-        })
-        .sum()
+    let mut total = 0;
+    for (a, b) in a.chunks(CHUNK).zip(b.chunks(CHUNK)) {
+        let mut sum = 0i32;
+        for (a, b) in a.iter().zip(b) {
+            sum += i32::from(*a) * i32::from(*b);
+        }
+        total += i64::from(sum);
+    }
+    total
 }
 
 /// Bits set in both `a` and `b` moved down by `shift`.
@@ -358,7 +377,9 @@ fn joined(reach: usize, values: &[f64], threshold: impl Fn(usize) -> f64) -> Vec
     let mut inside = vec![false; values.len()];
     let mut open = vec![(0isize, 0isize)];
     while let Some((dx, dy)) = open.pop() {
-        let Some(i) = lag_index(reach, dx, dy) else { continue };
+        let Some(i) = lag_index(reach, dx, dy) else {
+            continue;
+        };
         if inside[i] || ((dx, dy) != (0, 0) && values[i] <= threshold(i)) {
             continue;
         }
@@ -369,7 +390,12 @@ fn joined(reach: usize, values: &[f64], threshold: impl Fn(usize) -> f64) -> Vec
 }
 
 /// The coefficients worth summing, and the error of a far one.
-fn significant(reach: usize, values: &[f64], pairs: &[f64]) -> (Vec<f64>, f64) {
+fn significant(
+    reach: usize,
+    values: &[f64],
+    pairs: &[f64],
+    kernel: Option<KernelEllipse>,
+) -> (Vec<f64>, f64) {
     let square = |inside: &[bool]| -> f64 {
         let kept: Vec<f64> =
             values.iter().zip(inside).filter(|(_, i)| **i).map(|(v, _)| v * v).collect();
@@ -419,6 +445,9 @@ fn significant(reach: usize, values: &[f64], pairs: &[f64]) -> (Vec<f64>, f64) {
         if !widened[i] && kept[i].abs() <= 0.0 {
             let (r, c) = (row_means[(dy + half) as usize], column_means[(dx + half) as usize]);
             kept[i] = if r.abs() >= c.abs() { r } else { c };
+            if kept[i].abs() <= 0.0 {
+                kept[i] = kernel.map_or(0.0, |kernel| kernel.correlation(dx, dy));
+            }
         }
     }
     let nearest = lag_index(reach, 0, 0).map_or(0.0, error);
@@ -465,7 +494,7 @@ fn fit_kernel(reach: usize, values: &[f64]) -> Option<KernelEllipse> {
             + m[0][2] * (m[1][0] * m[2][1] - m[1][1] * m[2][0])
     };
     let base = determinant(&m);
-    if !(base.abs() > 1e-9 * m[0][0] * m[1][1] * m[2][2]) {
+    if base.is_nan() || base.abs() <= 1e-9 * m[0][0] * m[1][1] * m[2][2] {
         return None;
     }
     let solve = |column: usize| {

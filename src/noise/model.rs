@@ -110,14 +110,17 @@ impl Noise {
                 ((x1.floor().max(0.0) as usize) + 1).min(self.columns)
             };
             let slope = (b - a) / (x1 - x0);
-            out.extend((out.len()..end).map(|x| a + slope * (x as f64 - x0)));
+            // Through i32: that conversion is done for several pixels at once.
+            out.extend((out.len()..end).map(|x| a + slope * (f64::from(x as i32) - x0)));
         }
     }
 }
 
 /// The interval of the nodes that holds a position, and the fraction within it (0 to 1).
 fn bracket(nodes: &[f64], at: f64) -> (usize, f64) {
-    let (Some(first), Some(last)) = (nodes.first(), nodes.last()) else { return (0, 0.0) };
+    let (Some(first), Some(last)) = (nodes.first(), nodes.last()) else {
+        return (0, 0.0);
+    };
     if nodes.len() < 2 || at.is_nan() {
         return (0, 0.0);
     }

@@ -68,7 +68,7 @@ fn relative(axis: Axis, at: f64) -> f64 {
 pub(crate) fn fit_plane(values: &[(f64, f64, f64, f64)]) -> Option<Plane> {
     // (u, v, value, weight), moments about the weighted means.
     let total: f64 = values.iter().map(|p| p.3).sum();
-    if !(total > 0.0) {
+    if total.is_nan() || total <= 0.0 {
         return None;
     }
     let mean = |f: fn(&(f64, f64, f64, f64)) -> f64| {

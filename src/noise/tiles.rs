@@ -9,6 +9,10 @@ use crate::stats::{SortedSample, clipped, median, quantile};
 /// Tiles larger than this are sampled at every second pixel of both axes in the first look.
 const FULL_SAMPLE_PX: usize = 900;
 
+/// Tiles that spread more than this many times the quietest ones are not used to find the
+/// level of the sky: an rms that varies by 4 over the map passes.
+const QUIET: f64 = 4.0;
+
 /// What was measured in a tile.
 #[derive(Clone, Copy, Debug)]
 struct Tile {
@@ -43,10 +47,11 @@ pub(super) fn estimate(
     let guess = Reach { mean_px: 20.0, variance_px: 10.0, fwhm_px: 3.0 };
     let mut noise = model(field, &first, x, y, hints, guess, false).ok_or_else(|| no_sky(0))?;
     let mut reach = None;
+    let mut signal = Vec::with_capacity(field.values.len());
     for _ in 0..2 {
         let fwhm = reach.map(|r: Reach| r.fwhm_px);
         let mask = source_mask(field, &noise, settings, grow_px(hints, fwhm));
-        let signal = normalised(field, &noise, &mask);
+        normalised_into(field, &noise, &mask, &mut signal);
         let measured = measure_reach(&signal, field.columns);
         reach = Some(measured);
         let mut found = masked_look(&signal, &noise, settings, x, y, step);
@@ -87,7 +92,7 @@ fn first_look(
             let (columns, rows) = (x.window(i), y.window(j));
             let thin = columns.len() * rows.len() > FULL_SAMPLE_PX;
             // Every second pixel counted from the nearer edge: the same for mirrored maps.
-            let keep = |at: usize, size: usize| !thin || at.min(size - 1 - at) % 2 == 0;
+            let keep = |at: usize, size: usize| !thin || at.min(size - 1 - at).is_multiple_of(2);
             buffer.clear();
             for row in rows.filter(|row| keep(*row, field.rows)) {
                 let line = field.row(row).get(columns.clone()).unwrap_or(&[]);
@@ -102,11 +107,18 @@ fn first_look(
         }
     }
     let mut spreads: Vec<f64> = samples.iter().filter_map(|s| s.1.map(|(_, rms)| rms)).collect();
-    let Some(usual) = quantile(&mut spreads, 0.3) else { return vec![None; samples.len()] };
+    // The quietest tiles set the scale: emission may fill all but a few of them.
+    let Some(usual) = quantile(&mut spreads, 0.1) else {
+        return vec![None; samples.len()];
+    };
     // A robust plane through the backgrounds of the quiet tiles tells where the sky is.
     let quiet: Vec<TileValue> = samples
         .iter()
-        .map(|s| s.1.filter(|(_, rms)| *rms <= 3.0 * usual).map(|(level, _)| (level, usual)))
+        .map(|s| {
+            let quiet = s.1.filter(|(_, rms)| *rms <= QUIET * usual);
+            // The quieter, the surer: the weight falls with the fourth power of the rms.
+            quiet.map(|(level, rms)| (level, rms * rms / usual))
+        })
         .collect();
     let sky = robust_levels(&quiet, x, y, usual);
     samples
@@ -115,7 +127,10 @@ fn first_look(
         .map(|((sample, start), sky)| {
             let used = sample.values().len();
             let (level, rms) = (*start)?;
-            if rms <= 3.0 * usual && level - sky <= 4.0 * rms.max(usual) {
+            if rms <= QUIET * usual && level - sky <= 3.0 * usual {
+                // Where a good part of the tile lies below the sky, that side tells its rms.
+                let below = sample.lower_sigma(sky, used / 4).filter(|s| *s > 0.3 * rms);
+                let rms = below.map_or(rms, |below| rms.min(1.2 * below).max(0.5 * step));
                 return Some(Tile { background: level, rms, used });
             }
             let rms = sample.lower_sigma(sky, (used / 10).max(5))?.max(0.5 * step);
@@ -136,21 +151,24 @@ fn mode_and_spread(
     (rms > 0.0).then_some((kept.mean, rms))
 }
 
-/// Plane of least absolute deviations (iteratively reweighted) at every tile; the median of
-/// the quiet tiles where there are fewer than six.
+/// Plane of least absolute deviations (iteratively reweighted) at every tile; where there
+/// are fewer than six quiet tiles, the median of the quietest of them.
 fn robust_levels(quiet: &[TileValue], x: Axis, y: Axis, scale: f64) -> Vec<f64> {
     let mut data = points(quiet, x, y);
-    let mut levels: Vec<f64> = data.iter().map(|p| p.2).collect();
+    let surest = data.iter().map(|p| p.3).fold(0.0, f64::max);
+    // A fifth of the weight: half as noisy again.
+    let mut levels: Vec<f64> = data.iter().filter(|p| p.3 >= 0.2 * surest).map(|p| p.2).collect();
     let middle = median(&mut levels).unwrap_or(0.0);
     if data.len() < 6 {
         return vec![middle; quiet.len()];
     }
     let mut plane = None;
+    let weights: Vec<f64> = data.iter().map(|p| p.3).collect();
     for _ in 0..12 {
         let Some(fit) = fit_plane(&data) else { break };
-        for p in &mut data {
+        for (p, weight) in data.iter_mut().zip(&weights) {
             let r = p.2 - (fit.level + fit.slope_x * p.0 + fit.slope_y * p.1);
-            p.3 = 1.0 / r.abs().max(0.2 * scale);
+            p.3 = weight / r.abs().max(0.2 * scale);
         }
         plane = Some(fit);
     }
@@ -163,8 +181,8 @@ fn robust_levels(quiet: &[TileValue], x: Axis, y: Axis, scale: f64) -> Vec<f64> 
 }
 
 /// (value − background)/rms, NaN where blank or masked.
-fn normalised(field: &Field, noise: &Noise, mask: &PixelMask) -> Vec<f64> {
-    let mut out = Vec::with_capacity(field.values.len());
+fn normalised_into(field: &Field, noise: &Noise, mask: &PixelMask, out: &mut Vec<f64>) {
+    out.clear();
     let (mut background, mut rms) = (Vec::new(), Vec::new());
     for y in 0..field.rows {
         noise.row_into(y, &mut background, &mut rms);
@@ -173,7 +191,6 @@ fn normalised(field: &Field, noise: &Noise, mask: &PixelMask) -> Vec<f64> {
             if *masked { f64::NAN } else { (value - level) / rms }
         }));
     }
-    out
 }
 
 /// Clipped mean and rms of what is not masked in every tile.
@@ -242,23 +259,14 @@ fn pooled(signal: &[f64], noise: &Noise, settings: &NoiseSettings) -> Option<Til
 
 /// Correlation at one pixel's distance and what a Gaussian of that width sums to.
 fn measure_reach(signal: &[f64], columns: usize) -> Reach {
-    let inside = |v: f64| if v.abs() <= 4.0 { v } else { f64::NAN };
-    let along = |pairs: &mut dyn Iterator<Item = (&f64, &f64)>| {
-        let (mut product, mut power) = (0.0, 0.0);
-        for (a, b) in pairs {
-            let (a, b) = (inside(*a), inside(*b));
-            let (ab, square) = (a * b, 0.5 * (a * a + b * b));
-            let both = !ab.is_nan();
-            product += if both { ab } else { 0.0 };
-            power += if both { square } else { 0.0 };
-        }
+    let ratio = |(product, power): (f64, f64)| {
         if power > 0.0 { (product / power).clamp(0.0, 0.999) } else { 0.0 }
     };
-    let down = signal.get(columns..).unwrap_or(&[]);
-    let rho_y = along(&mut signal.iter().zip(down));
-    let mut in_rows =
-        signal.chunks_exact(columns.max(1)).flat_map(|row| row.iter().zip(row.iter().skip(1)));
-    let rho_x = along(&mut in_rows);
+    let rho_y = ratio(pair_moments(signal, signal.get(columns..).unwrap_or(&[])));
+    let rho_x = ratio(signal.chunks_exact(columns.max(1)).fold((0.0, 0.0), |sums, row| {
+        let (product, power) = pair_moments(row, row.get(1..).unwrap_or(&[]));
+        (sums.0 + product, sums.1 + power)
+    }));
     // ρ(d) = ρ(1)^(d²): sums over integer lags, squares with twice the exponent.
     let sum = |rho: f64, power: f64| {
         1.0 + 2.0
@@ -275,6 +283,33 @@ fn measure_reach(signal: &[f64], columns: usize) -> Reach {
         variance_px: sum(rho_x, 2.0) * sum(rho_y, 2.0),
         fwhm_px: (fwhm(rho_x) * fwhm(rho_y)).sqrt(),
     }
+}
+
+/// Sums of a b and of (a² + b²)/2 over pairs that are both within ±4 (and not NaN).
+fn pair_moments(a: &[f64], b: &[f64]) -> (f64, f64) {
+    const LANES: usize = 8;
+    let shared = a.len().min(b.len());
+    let (a, b) = (a.get(..shared).unwrap_or(&[]), b.get(..shared).unwrap_or(&[]));
+    let term = |a: f64, b: f64| {
+        let both = (a.abs() <= 4.0) & (b.abs() <= 4.0);
+        if both { (a * b, 0.5 * (a * a + b * b)) } else { (0.0, 0.0) }
+    };
+    let (mut products, mut powers) = ([0.0; LANES], [0.0; LANES]);
+    let (a_chunks, a_rest) = a.as_chunks::<LANES>();
+    let (b_chunks, b_rest) = b.as_chunks::<LANES>();
+    for (a, b) in a_chunks.iter().zip(b_chunks) {
+        for lane in 0..LANES {
+            let (product, power) = term(a[lane], b[lane]);
+            products[lane] += product;
+            powers[lane] += power;
+        }
+    }
+    let mut sums = (products.iter().sum::<f64>(), powers.iter().sum::<f64>());
+    for (a, b) in a_rest.iter().zip(b_rest) {
+        let (product, power) = term(*a, *b);
+        sums = (sums.0 + product, sums.1 + power);
+    }
+    sums
 }
 
 /// The smooth model through the tiles.
@@ -312,7 +347,7 @@ fn model(
         power += used * tile.rms * tile.rms * libm::exp(2.0 * unbiased - 1.0 / for_variance);
         level += used * tile.background;
     }
-    if !(weight > 0.0) {
+    if weight <= 0.0 {
         return None;
     }
     let floor = quantisation_floor(hints);

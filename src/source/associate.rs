@@ -29,15 +29,17 @@ pub struct SourceRegions {
 
 /// Chance pairs above which joining is refused where the region at the anchor is extended:
 /// it is then most likely the whole source.
-const CHANCE_WITH_EXTENDED: f64 = 0.005;
+const CHANCE_WITH_EXTENDED: f64 = 0.001;
 /// The same where the region at the anchor is compact: it may be the core of a wide double.
-const CHANCE_WITH_COMPACT: f64 = 0.1;
+const CHANCE_WITH_COMPACT: f64 = 0.02;
 /// The same where nothing lies at the anchor: a source is then most likely a double around it.
 const CHANCE_WITHOUT_CORE: f64 = 0.5;
 /// A region at the anchor that stays within this many beam majors of it is compact.
 const COMPACT_BEAMS: f64 = 1.75;
 /// Partners fainter than this share of the peak at the anchor could be its sidelobes.
 const SIDELOBE_SHARE: f64 = 0.015;
+/// Chance counterparts above which a one-sided region at the anchor stays alone.
+const CHANCE_COUNTERPART: f64 = 0.05;
 /// Chance singles above which a lone region away from a known host is not its source.
 const CHANCE_SINGLE: f64 = 0.3;
 /// Gap, in beam majors, over which a fragment is taken as part of its neighbour.
@@ -49,8 +51,8 @@ pub const CHANCE_UNSURE: f64 = 0.1;
 struct Seen {
     /// Distance of its nearest pixel, sky units.
     nearest: f64,
-    /// Distance of its farthest pixel, sky units.
-    farthest: f64,
+    /// Its farthest pixel from the anchor.
+    farthest: SkyOffset,
     /// Highest brightness.
     peak: f64,
     /// Flux-weighted middle from the anchor, sky units.
@@ -59,6 +61,13 @@ struct Seen {
     flux: f64,
     /// Regions at least as bright, per sky area, not counting those at the anchor.
     density: f64,
+}
+
+impl Seen {
+    /// Unrelated regions at least as bright expected within its distance.
+    fn chance_singles(&self) -> f64 {
+        self.density * std::f64::consts::PI * self.middle.radius().powi(2)
+    }
 }
 
 /// Joins regions to one source; `None` where no region can be the anchor's.
@@ -87,8 +96,9 @@ pub fn associate(
                 .runs
                 .iter()
                 .flat_map(|run| [run.x0, run.x1].map(|x| Pixel::new(x as f64, run.y as f64)))
-                .map(|p| frame.offset(p).radius())
-                .fold(0.0, f64::max);
+                .map(|p| frame.offset(p))
+                .max_by(|a, b| a.radius().total_cmp(&b.radius()))
+                .unwrap_or_default();
             Seen {
                 nearest,
                 farthest,
@@ -110,33 +120,21 @@ pub fn associate(
 
     let mut members = at_anchor.clone();
     let mut chance = 0.0;
-    let extent = at_anchor.iter().map(|&i| seen[i].farthest).fold(0.0, f64::max);
-    let allowed = if members.is_empty() {
-        CHANCE_WITHOUT_CORE
-    } else if extent <= COMPACT_BEAMS * beam {
-        CHANCE_WITH_COMPACT
-    } else {
-        CHANCE_WITH_EXTENDED
-    };
-    let least_peak = SIDELOBE_SHARE * at_anchor.iter().map(|&i| seen[i].peak).fold(0.0, f64::max);
-    let pair = best_pair(&seen, &at_anchor, least_peak, beam);
-    match pair {
-        Some((expected, i, j)) if expected <= allowed => {
-            members.extend([i, j]);
+    // Pairs are added from the inside outwards: lobes around a core, outer lobes around those.
+    while let Some(partners) = best_partners(&seen, &members, beam) {
+        members.extend(partners.regions);
+        chance += partners.chance;
+    }
+    if members.is_empty() {
+        let i = (0..seen.len()).min_by(|&a, &b| seen[a].nearest.total_cmp(&seen[b].nearest))?;
+        let expected = seen[i].density * std::f64::consts::PI * seen[i].nearest.powi(2);
+        if anchor.is_known && expected > CHANCE_SINGLE {
+            return None;
+        }
+        members.push(i);
+        if anchor.is_known {
             chance = expected;
         }
-        _ if members.is_empty() => {
-            let i = (0..seen.len()).min_by(|&a, &b| seen[a].nearest.total_cmp(&seen[b].nearest))?;
-            let expected = seen[i].density * std::f64::consts::PI * seen[i].nearest.powi(2);
-            if anchor.is_known && expected > CHANCE_SINGLE {
-                return None;
-            }
-            members.push(i);
-            if anchor.is_known {
-                chance = expected;
-            }
-        }
-        _ => {}
     }
     join_fragments(regions, &seen, &mut members, frame, beam);
     members.sort_unstable();
@@ -144,46 +142,153 @@ pub fn associate(
     Some(SourceRegions { members, chance })
 }
 
-/// The pair of regions on opposite sides of the anchor that chance explains worst, with the
-/// expected number of chance pairs as good.
-fn best_pair(
-    seen: &[Seen],
-    at_anchor: &[usize],
+/// What lies at the anchor, as far as partners are judged by it.
+struct Middle {
+    /// Summed brightness of its regions.
+    flux: f64,
+    /// Direction of its longest arm, where it is extended.
+    axis: Option<SkyOffset>,
+    /// Partners fainter than this could be sidelobes.
     least_peak: f64,
-    beam: f64,
-) -> Option<(f64, usize, usize)> {
-    let mut best: Option<(f64, usize, usize)> = None;
+}
+
+impl Middle {
+    fn new(seen: &[Seen], at_anchor: &[usize], beam: f64) -> Self {
+        let flux = at_anchor.iter().map(|&i| seen[i].flux).sum();
+        let brightest = at_anchor.iter().map(|&i| seen[i].peak).fold(0.0, f64::max);
+        let longest = at_anchor
+            .iter()
+            .map(|&i| seen[i].farthest)
+            .max_by(|a, b| a.radius().total_cmp(&b.radius()))
+            .filter(|far| far.radius() > COMPACT_BEAMS * beam);
+        Self { flux, axis: longest, least_peak: SIDELOBE_SHARE * brightest }
+    }
+
+    fn allowed(&self) -> f64 {
+        if self.flux <= 0.0 {
+            CHANCE_WITHOUT_CORE
+        } else if self.axis.is_none() {
+            CHANCE_WITH_COMPACT
+        } else {
+            CHANCE_WITH_EXTENDED
+        }
+    }
+
+    /// Rank in [0, 1] of how well a direction lies along the middle's own axis; `None` where
+    /// it has none.
+    fn alignment(&self, direction: SkyOffset) -> Option<f64> {
+        let axis = self.axis?;
+        let cosine = axis.dot(direction).abs() / (axis.radius() * direction.radius());
+        Some((cosine.min(1.0).acos().to_degrees() / 90.0).max(0.05))
+    }
+
+    /// Factor by which partners that hold less than the middle itself are less credible.
+    fn faintness(&self, partners: f64) -> f64 {
+        (self.flux / partners.max(f64::MIN_POSITIVE)).max(1.0)
+    }
+}
+
+/// Regions that complete the source, and the expected number of chance groups as good.
+struct Partners {
+    chance: f64,
+    regions: Vec<usize>,
+}
+
+/// The pair or counterpart that completes the source best, where chance would rarely bring it.
+fn best_partners(seen: &[Seen], members: &[usize], beam: f64) -> Option<Partners> {
+    let middle = Middle::new(seen, members, beam);
+    let pair = best_pair(seen, members, &middle, beam).filter(|p| p.chance <= middle.allowed());
+    let counterpart =
+        best_counterpart(seen, members, &middle, beam).filter(|p| p.chance <= CHANCE_COUNTERPART);
+    match (pair, counterpart) {
+        (Some(a), Some(b)) => Some(if b.chance < a.chance { b } else { a }),
+        (a, b) => a.or(b),
+    }
+}
+
+/// The pair of regions on opposite sides of the anchor that chance explains worst.
+fn best_pair(seen: &[Seen], at_anchor: &[usize], middle: &Middle, beam: f64) -> Option<Partners> {
+    let mut best: Option<Partners> = None;
     for i in 0..seen.len() {
         for j in i + 1..seen.len() {
-            let faint = seen[i].peak.min(seen[j].peak) < least_peak;
+            let (a, b) = (&seen[i], &seen[j]);
+            let faint = a.peak.min(b.peak) < middle.least_peak;
             if faint || at_anchor.contains(&i) || at_anchor.contains(&j) {
                 continue;
             }
-            let (a, b) = (&seen[i], &seen[j]);
-            let (ra, rb) = (a.middle.radius(), b.middle.radius());
-            let cosine = a.middle.dot(b.middle) / (ra * rb).max(f64::MIN_POSITIVE);
-            let angle_deg = cosine.clamp(-1.0, 1.0).acos().to_degrees();
-            let departure_deg = (180.0 - angle_deg).max(5.0);
-            let arm_ratio = ra.max(rb) / ra.min(rb).max(0.5 * beam);
-            let flux_ratio = a.flux.max(b.flux) / a.flux.min(b.flux).max(f64::MIN_POSITIVE);
-            if departure_deg > 75.0 || arm_ratio > 4.0 || flux_ratio > 50.0 {
-                continue;
-            }
-            // Each partner anywhere within its own distance, and the pair as well matched: the
-            // chance that a product of three uniform ranks (departure from opposition, arm
-            // ratio, flux ratio) is as small is x (1 − ln x + ½ ln² x) (Fisher's combination).
-            let disc = |s: &Seen| s.density * std::f64::consts::PI * s.middle.radius().powi(2);
-            let x = (departure_deg / 90.0)
-                * (arm_ratio.ln() / 4f64.ln()).clamp(0.05, 1.0)
-                * (flux_ratio.ln() / 50f64.ln()).clamp(0.05, 1.0);
-            let matched = x * (1.0 - x.ln() + 0.5 * x.ln().powi(2));
-            let expected = disc(a) * disc(b) * matched;
-            if best.is_none_or(|(least, ..)| expected < least) {
-                best = Some((expected, i, j));
+            let Some(mut ranks) = match_ranks(a, b, beam) else { continue };
+            ranks.extend(middle.alignment(a.middle.minus(b.middle)));
+            let chance = a.chance_singles()
+                * b.chance_singles()
+                * combined_rank(&ranks)
+                * middle.faintness(a.flux + b.flux);
+            if best.as_ref().is_none_or(|found| chance < found.chance) {
+                best = Some(Partners { chance, regions: vec![i, j] });
             }
         }
     }
     best
+}
+
+/// The region that completes a one-sided region at the anchor on the other side.
+fn best_counterpart(
+    seen: &[Seen],
+    at_anchor: &[usize],
+    middle: &Middle,
+    beam: f64,
+) -> Option<Partners> {
+    // A side that has its counterpart already is not one-sided.
+    let one_sided = |k: usize| {
+        seen[k].middle.radius() > 1.5 * beam
+            && !at_anchor.iter().any(|&m| {
+                m != k && seen[m].middle.dot(seen[k].middle) < 0.0 && seen[m].middle.radius() > beam
+            })
+    };
+    let mut best: Option<Partners> = None;
+    for i in at_anchor.iter().copied().filter(|&i| one_sided(i)) {
+        for j in (0..seen.len()).filter(|j| !at_anchor.contains(j)) {
+            if seen[j].peak < middle.least_peak {
+                continue;
+            }
+            let Some(ranks) = match_ranks(&seen[i], &seen[j], beam) else { continue };
+            let chance = seen[j].chance_singles() * combined_rank(&ranks);
+            if best.as_ref().is_none_or(|found| chance < found.chance) {
+                best = Some(Partners { chance, regions: vec![j] });
+            }
+        }
+    }
+    best
+}
+
+/// How well two regions match as the two sides of one source, as ranks in [0, 1]: departure
+/// from opposition, arm ratio, flux ratio. `None` where they do not match at all.
+fn match_ranks(a: &Seen, b: &Seen, beam: f64) -> Option<Vec<f64>> {
+    let (ra, rb) = (a.middle.radius(), b.middle.radius());
+    let cosine = a.middle.dot(b.middle) / (ra * rb).max(f64::MIN_POSITIVE);
+    let departure_deg = (180.0 - cosine.clamp(-1.0, 1.0).acos().to_degrees()).max(5.0);
+    let arm_ratio = ra.max(rb) / ra.min(rb).max(0.5 * beam);
+    let flux_ratio = a.flux.max(b.flux) / a.flux.min(b.flux).max(f64::MIN_POSITIVE);
+    if departure_deg > 75.0 || arm_ratio > 4.0 || flux_ratio > 50.0 {
+        return None;
+    }
+    Some(vec![
+        departure_deg / 90.0,
+        (arm_ratio.ln() / 4f64.ln()).clamp(0.05, 1.0),
+        (flux_ratio.ln() / 50f64.ln()).clamp(0.05, 1.0),
+    ])
+}
+
+/// Chance that the product of `n` uniform ranks is as small as this one:
+/// x Σ (−ln x)^k / k!, k < n (Fisher's combination of independent tests).
+fn combined_rank(ranks: &[f64]) -> f64 {
+    let x: f64 = ranks.iter().product();
+    let mut term = 1.0;
+    let mut sum = 0.0;
+    for k in 0..ranks.len() {
+        sum += term;
+        term *= -x.ln() / (k as f64 + 1.0);
+    }
+    (x * sum).min(1.0)
 }
 
 /// Adds regions within a small gap of a member, and regions in the corridor between the

@@ -153,7 +153,7 @@ fn core_at_host(
     if let Some(peak) = near
         && let Some(fit) = fit_at(peak.pixel, true)
         && fit.peak > CORE_DETECTION_SIGMA * fit.peak_sigma
-        && distance(fit.pixel) <= 1.5 * reach
+        && distance(fit.pixel) <= reach
     {
         return Core {
             pixel: Some(fit.pixel),

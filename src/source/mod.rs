@@ -5,6 +5,8 @@ pub mod associate;
 pub mod core;
 pub mod sides;
 
+use image::{GrayImage, Luma};
+use imageproc::region_labelling::{Connectivity, connected_components};
 use ndarray::Array2;
 
 use crate::contour::{contour_lines, farthest_pair};
@@ -100,7 +102,9 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
     let local_rms = input.noise.rms(brightest.peak.x, brightest.peak.y);
     let level = (input.outline_sigma * local_rms).max(input.least_level);
     // Edge and neighbours: the contour is drawn on the source's own pixels and their rim.
-    let lines = contour_lines(&OwnContour { window: &window, level }, level, None);
+    let least_px = 0.5 * input.beam.area_px(input.geometry);
+    let own = islands_above(&window, level, least_px);
+    let lines = contour_lines(&OwnContour { window: &window, own: &own, level }, level, None);
     let cut_off = lines.iter().any(|line| !line.is_closed());
     let points: Vec<Pixel> = lines
         .iter()
@@ -148,7 +152,7 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
         };
         let ridges = trace_ridges(&coreless, &context);
         let features =
-            find_features(&peaks, &points, &ridges, &frame, input.beam.major, core.fit.is_some());
+            find_features(&peaks, &points, &ridges, &frame, input.beam, level, core.fit.is_some());
         (ridges, features)
     });
     Some(SourceModel {
@@ -166,11 +170,38 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
     })
 }
 
+/// The source's pixels at or above the level, without islands smaller than `least_px`: where
+/// the level lies above the local outline (noise that varies, a clipped map), crumbs remain
+/// that would carry the contour far out.
+fn islands_above(window: &Window, level: f64, least_px: f64) -> Array2<bool> {
+    let above = |r: usize, c: usize| window.member[[r, c]] && window.brightness[[r, c]] >= level;
+    let (rows, columns) = window.brightness.dim();
+    let shape = (u32::try_from(columns).unwrap_or(0), u32::try_from(rows).unwrap_or(0));
+    // Labels count in u32; a single pixel is an island of its own.
+    if rows * columns < 4 || shape.0 == 0 || shape.1 == 0 {
+        return Array2::from_shape_fn((rows, columns), |(r, c)| above(r, c));
+    }
+    let mask = GrayImage::from_fn(shape.0, shape.1, |x, y| {
+        Luma([u8::from(above(y as usize, x as usize))])
+    });
+    let labels = connected_components(&mask, Connectivity::Eight, Luma([0u8]));
+    let mut area = vec![0.0; labels.pixels().map(|p| p.0[0] as usize + 1).max().unwrap_or(1)];
+    for label in labels.pixels() {
+        area[label.0[0] as usize] += 1.0;
+    }
+    let largest = area.iter().skip(1).copied().fold(0.0, f64::max);
+    Array2::from_shape_fn((rows, columns), |(r, c)| {
+        let label = labels.get_pixel(c as u32, r as u32).0[0] as usize;
+        label > 0 && area[label] >= least_px.min(largest)
+    })
+}
+
 /// The window as the contour sees it: pixels that are not the source's own lie just below
 /// the level, so that the line closes around the source where the rms varies or a neighbour
 /// touches.
 struct OwnContour<'a> {
     window: &'a Window,
+    own: &'a Array2<bool>,
     level: f64,
 }
 
@@ -185,7 +216,7 @@ impl Grid for OwnContour<'_> {
 
     fn value(&self, x: usize, y: usize) -> f64 {
         let value = Grid::value(self.window, x, y);
-        let own = self.window.member.get((y, x)).copied().unwrap_or(false);
+        let own = self.own.get((y, x)).copied().unwrap_or(false);
         // A blank pixel stays blank: the line is open there.
         if own || value.is_nan() { value } else { value.min(0.999 * self.level) }
     }

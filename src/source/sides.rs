@@ -1,6 +1,8 @@
 //! The two sides of the source: which emission belongs to which, their hot spots, their
 //! brightest points and ends.
 
+use crate::extent::beam_reach;
+use crate::map::beam::Beam;
 use crate::map::geometry::LocalFrame;
 use crate::ridge::Ridge;
 use crate::source::core::Peak;
@@ -27,7 +29,8 @@ impl Feature {
 pub struct SideFeatures {
     /// The brightest peak of the side's outer part.
     pub hotspot: Option<Feature>,
-    /// The brightest peak beyond 1.5 beams from the core.
+    /// The brightest peak beyond 1.5 beams from the core; `None` where the side falls from
+    /// there outwards.
     pub brightest: Option<Feature>,
     /// All peaks of the side, by growing distance.
     pub peaks: Vec<Feature>,
@@ -54,13 +57,15 @@ pub fn side_of(ridges: &[Ridge; 2], offset: SkyOffset) -> usize {
     usize::from(turn(&ridges[1]) < turn(&ridges[0]))
 }
 
-/// Sorts peaks and contour points to the sides and picks each side's features.
+/// Sorts peaks and contour points to the sides and picks each side's features. `level` is
+/// the contour's, map unit.
 pub fn find_features(
     peaks: &[Peak],
     contour: &[Pixel],
     ridges: &[Ridge; 2],
     frame: &LocalFrame,
-    beam_major: f64,
+    beam: &Beam,
+    level: f64,
     core_detected: bool,
 ) -> [SideFeatures; 2] {
     let mut sides = [SideFeatures::default(), SideFeatures::default()];
@@ -73,23 +78,29 @@ pub fn find_features(
     }
     for &peak in peaks {
         let offset = frame.offset(peak.pixel);
-        let nearest = if core_detected { CORE_BEAMS } else { 0.3 } * beam_major;
+        let nearest = if core_detected { CORE_BEAMS } else { 0.3 } * beam.major;
         if offset.radius() > nearest {
             sides[side_of(ridges, offset)].peaks.push(Feature { peak, offset });
         }
     }
-    for side in &mut sides {
+    for (index, side) in sides.iter_mut().enumerate() {
         side.peaks.sort_by(|a, b| a.distance().total_cmp(&b.distance()));
         let length = side.farthest.map_or(0.0, |(_, far)| far.radius());
         let brightest = |list: &mut dyn Iterator<Item = &Feature>| {
             list.max_by(|a, b| a.peak.value.total_cmp(&b.peak.value)).copied()
         };
         let overall = brightest(&mut side.peaks.iter());
+        // The contour lies beyond an unresolved end by the beam's reach.
+        let reach = overall.map_or(0.0, |f| beam_reach(f.peak.value, level, beam.mean_fwhm()));
+        let length = (length - reach).max(0.0);
         let outer =
             brightest(&mut side.peaks.iter().filter(|f| f.distance() >= OUTER_SHARE * length));
-        side.brightest = brightest(
-            &mut side.peaks.iter().filter(|f| f.distance() >= BRIGHTEST_BEYOND_BEAMS * beam_major),
-        );
+        // A side that is brighter where the search begins than at any peak falls outwards.
+        let nearest = BRIGHTEST_BEYOND_BEAMS * beam.major;
+        let inner = ridges[index].points.iter().find(|p| p.distance >= nearest);
+        let inner = inner.map_or(0.0, |p| p.brightness);
+        side.brightest = brightest(&mut side.peaks.iter().filter(|f| f.distance() >= nearest))
+            .filter(|f| f.peak.value > inner);
         side.hotspot = outer.filter(|f| {
             overall.is_some_and(|all| f.peak.value >= HOTSPOT_BRIGHTNESS * all.peak.value)
         });

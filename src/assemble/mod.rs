@@ -1,0 +1,397 @@
+//! From what the stages found to the record: quantities formed, units put on, reasons given
+//! where there is no number. Every quantity is formed here or in the stage it names, once.
+
+mod roles;
+mod shape;
+mod side;
+mod strips;
+mod sums;
+mod units;
+
+use std::collections::BTreeMap;
+
+use self::roles::order_sides;
+use self::shape::{arms, fr_ratios, measure_extents};
+use self::side::side_record;
+use self::strips::brightness_record;
+use self::sums::{brightest_region, core_flux, core_flux_noise, lobe_flux_ratio, sum_parts};
+use self::units::Units;
+use crate::brightness::{PlacedStrip, StripPair};
+use crate::class::classify;
+use crate::flags::{self, Flag};
+use crate::map::SkyMap;
+use crate::measurement::{Bare, Because, Measurement, OrMissing};
+use crate::physics::{self, PhysicsInput, constrain_physics};
+use crate::pipeline::{MapName, Observed};
+use crate::record::{
+    ArmBasis, BrightnessRecord, CoreBasis, CoreRecord, Described, FrClass, FrClassName, Input,
+    MapRecord, NoiseRecord, Position, PositionBasis, RECORD_VERSION, Rival, Role, SideRecord,
+    Software, SourcePosition, SourceRecord, Status, Symmetry,
+};
+use crate::ridge::Ridge;
+use crate::settings::Settings;
+use crate::source::SourceModel;
+use crate::source::associate::SourceRegions;
+use crate::source::sides::SideFeatures;
+use crate::units::{Pixel, SkyOffset};
+
+/// The strips of both sides, whole and in pieces.
+pub struct Strips {
+    /// Where they lie.
+    pub placed: PlacedStrip,
+    /// The whole strips' fluxes.
+    pub pair: StripPair,
+    /// Middle distance and fluxes of pieces one beam long.
+    pub profile: Vec<(f64, StripPair)>,
+    /// rms at the strip's distances away from the source, map unit.
+    pub near_rms: Option<f64>,
+    /// Share of the strips that is blank.
+    pub blank_fraction: f64,
+}
+
+/// All that the record is made from.
+pub struct Findings<'a> {
+    /// The map.
+    pub map: &'a SkyMap,
+    /// Its name.
+    pub name: &'a MapName,
+    /// Settings.
+    pub settings: &'a Settings,
+    /// Noise, beam, regions.
+    pub observed: &'a Observed,
+    /// The source's regions.
+    pub chosen: &'a SourceRegions,
+    /// The source.
+    pub model: &'a SourceModel,
+    /// Strips, where there is room.
+    pub strips: Option<Strips>,
+}
+
+/// Offset of a side's end: its hot spot, else its ridge's last point.
+pub fn end_offset(ridge: &Ridge, features: &SideFeatures) -> Option<SkyOffset> {
+    features.hotspot.map(|h| h.offset).or_else(|| ridge.points.last().map(|p| p.offset))
+}
+
+/// The record of a map on which nothing was found.
+pub fn assemble_without_source(
+    map: &SkyMap,
+    name: &MapName,
+    settings: &Settings,
+    observed: &Observed,
+    mut flags: Vec<Flag>,
+) -> MapRecord {
+    let because = Because::NoSource;
+    let none = Measurement::missing(because);
+    let units = Units::new(map, observed);
+    let middle = (0.5 * (map.columns as f64 - 1.0), 0.5 * (map.rows as f64 - 1.0));
+    let noise = noise_record(observed, &units, Pixel::new(middle.0, middle.1), None, None);
+    let brightness = BrightnessRecord {
+        jet_to_counter_jet_ratio: none,
+        jet_flux_density_mjy: none,
+        counter_jet_flux_density_mjy: none,
+        strip_covariance_mjy2: Bare::missing(because),
+        aperture: OrMissing::missing(because),
+        peak_ratio: none,
+        profile: Vec::new(),
+        sidedness_sigma: Bare::missing(because),
+    };
+    let physics = constrain_physics(
+        &physics_input(map, settings, none, none, none, none, [none; 2]),
+        &settings.cosmology,
+    );
+    assumed_values(map, &mut flags);
+    MapRecord {
+        record_version: RECORD_VERSION,
+        id: name.id.clone(),
+        file: name.file.clone(),
+        status: Status::NoDetection,
+        flags,
+        settings: *settings,
+        software: Software::default(),
+        input: input_record(map),
+        map: described(map),
+        noise,
+        core: CoreRecord {
+            position: OrMissing::missing(because),
+            position_error_arcsec: Bare::missing(because),
+            basis: CoreBasis::None,
+            confidence: 0.0,
+            rivals: Vec::new(),
+            flux_density_mjy: none,
+        },
+        source: SourceRecord {
+            position: OrMissing::missing(because),
+            total_flux_density_mjy: none,
+            contour_flux_density_mjy: none,
+            peak_brightness_mjy_per_beam: none,
+            peak_signal_to_noise: Bare::missing(because),
+            contour_mjy_per_beam: Bare::missing(because),
+            largest_angular_size_arcsec: none,
+            largest_angular_size_deconvolved_arcsec: none,
+            largest_size_px: none,
+            component_separation_arcsec: none,
+            position_angle_deg: none,
+            hotspot_separation_arcsec: none,
+            fr_ratio: none,
+            fr_ratio_deconvolved: none,
+            fr_class: FrClass { class: FrClassName::Undecided, probability: BTreeMap::new() },
+            arm_length_ratio: none,
+            arm_length_ratio_basis: ArmBasis::None,
+            longer_arm: OrMissing::missing(because),
+            arm_length_ratio_jet_side: none,
+            lobe_flux_ratio: none,
+            misalignment_deg: none,
+            bend_deg: none,
+            symmetry: Symmetry::Undecided,
+            axial_ratio: none,
+            core_prominence: none,
+            core_prominence_rest: none,
+        },
+        sides: [
+            SideRecord::missing(Role::First, because),
+            SideRecord::missing(Role::Second, because),
+        ],
+        components: Vec::new(),
+        brightness,
+        physics: physics.physics,
+    }
+}
+
+/// The record of a measured source.
+pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
+    let Findings { map, name, settings, observed, model, .. } = *findings;
+    let units = Units::new(map, observed);
+    let beam = &observed.working_beam;
+    let order = order_sides(findings, &mut flags);
+
+    let sums = sum_parts(findings, order.index);
+    let core_flux = core_flux(findings, &units, &sums);
+    let total = units.flux(sums.total.value, sums.total.sigma);
+
+    let extents = measure_extents(findings);
+    let size = extents.size;
+    let deconvolved = extents.deconvolved;
+    let sides = order.index.map(|k| side_record(findings, &units, &sums, k, order.role_of(k)));
+    let [first_side, second_side] = sides;
+    let arms = arms(findings, order.index);
+    let fr = fr_ratios(findings, order.index, size, deconvolved);
+    let beams = deconvolved.best().map(|d| d / beam.major);
+    let brightness = brightness_record(findings, &units, &order);
+
+    let las_arcsec = units.arcsec(size);
+    let physics = constrain_physics(
+        &physics_input(
+            map,
+            settings,
+            brightness.jet_to_counter_jet_ratio,
+            las_arcsec,
+            total,
+            core_flux,
+            [first_side.length_arcsec, second_side.length_arcsec],
+        ),
+        &settings.cosmology,
+    );
+    if !brightness.jet_to_counter_jet_ratio.is_missing() {
+        flags.push(Flag::new(flags::SYMMETRY_ASSUMED, &[]));
+    }
+    assumed_values(map, &mut flags);
+    let mut sides = [first_side, second_side];
+    for (side, kpc) in sides.iter_mut().zip(physics.side_length_kpc) {
+        side.length_kpc = kpc;
+    }
+
+    let peak = model
+        .peaks
+        .iter()
+        .map(|p| (p.value, p.signal_to_noise))
+        .fold((0.0, 0.0), |a, b| if b.0 > a.0 { b } else { a });
+    let peak = if peak.0 > 0.0 { peak } else { brightest_region(findings) };
+    let rms = if peak.1 > 0.0 { peak.0 / peak.1 } else { 0.0 };
+    let near = findings.strips.as_ref().and_then(|s| s.near_rms);
+    let core_px = model.core.pixel;
+    let status = if matches!(deconvolved, Measurement::UpperLimit { .. }) {
+        Status::Unresolved
+    } else {
+        Status::Measured
+    };
+    let prominence = physics::emission::core_prominence(
+        core_flux_noise(findings, &units, &sums),
+        units.flux_noise(sums.total.value, sums.total.sigma),
+    );
+    let source = SourceRecord {
+        position: source_position(map, model),
+        total_flux_density_mjy: total,
+        contour_flux_density_mjy: units.flux(sums.contour.value, sums.contour.sigma),
+        peak_brightness_mjy_per_beam: units.brightness(peak.0, rms),
+        peak_signal_to_noise: Bare::number(peak.1, Because::NoNoiseEstimate),
+        contour_mjy_per_beam: units.bare_brightness(model.level),
+        largest_angular_size_arcsec: las_arcsec,
+        largest_angular_size_deconvolved_arcsec: units.arcsec(deconvolved),
+        largest_size_px: units.px(size),
+        component_separation_arcsec: Measurement::missing(Because::NotImplemented),
+        position_angle_deg: arms.position_angle_deg,
+        hotspot_separation_arcsec: units.arcsec(arms.hotspot_separation),
+        fr_ratio: fr.whole,
+        fr_ratio_deconvolved: fr.deconvolved,
+        fr_class: classify(fr.deconvolved, beams),
+        arm_length_ratio: arms.folded,
+        arm_length_ratio_basis: arms.basis,
+        longer_arm: OrMissing::from_option(arms.longer.map(|k| order.role[k]), arms.because),
+        arm_length_ratio_jet_side: arms.unfolded,
+        lobe_flux_ratio: lobe_flux_ratio(&sums, settings),
+        misalignment_deg: arms.misalignment_deg,
+        bend_deg: arms.bend_deg,
+        symmetry: Symmetry::Undecided,
+        axial_ratio: extents.axial_ratio,
+        core_prominence: prominence,
+        core_prominence_rest: map.description.redshift.map_or(
+            Measurement::missing(Because::NoRedshift),
+            |redshift| {
+                physics::emission::core_prominence_rest(
+                    prominence,
+                    redshift,
+                    map.description.core_spectral_index_or_default(),
+                    map.description.total_spectral_index_or_default(),
+                )
+            },
+        ),
+    };
+    MapRecord {
+        record_version: RECORD_VERSION,
+        id: name.id.clone(),
+        file: name.file.clone(),
+        status,
+        flags,
+        settings: *settings,
+        software: Software::default(),
+        input: input_record(map),
+        map: described(map),
+        noise: noise_record(observed, &units, core_px.unwrap_or(model.middle), Some(peak.0), near),
+        core: CoreRecord {
+            position: OrMissing::from_option(core_px.map(|p| position(map, p)), Because::NoCore),
+            position_error_arcsec: core_px.map_or(Bare::missing(Because::NoCore), |_| {
+                units.bare_arcsec(model.core.position_sigma)
+            }),
+            basis: model.core.basis,
+            confidence: model.core.confidence,
+            rivals: model
+                .core
+                .rivals
+                .iter()
+                .map(|(peak, confidence)| Rival {
+                    x_px: peak.pixel.x,
+                    y_px: peak.pixel.y,
+                    signal_to_noise: peak.signal_to_noise,
+                    confidence: *confidence,
+                })
+                .collect(),
+            flux_density_mjy: core_flux,
+        },
+        source,
+        sides,
+        components: Vec::new(),
+        brightness,
+        physics: physics.physics,
+    }
+}
+
+fn physics_input(
+    map: &SkyMap,
+    settings: &Settings,
+    ratio: Measurement,
+    size: Measurement,
+    total: Measurement,
+    core: Measurement,
+    side_length_arcsec: [Measurement; 2],
+) -> PhysicsInput {
+    let d = &map.description;
+    let (spectral_index, spectral_index_error) = d.jet_spectral_index();
+    PhysicsInput {
+        redshift: d.redshift,
+        redshift_error: d.redshift_error,
+        distance_mpc: d.distance_mpc,
+        frequency_ghz: d.frequency_ghz,
+        spectral_index,
+        spectral_index_error,
+        core_spectral_index: d.core_spectral_index_or_default(),
+        total_spectral_index: d.total_spectral_index_or_default(),
+        flow: settings.flow,
+        ratio,
+        largest_angular_size_arcsec: size,
+        total_flux_density_mjy: total,
+        core_flux_density_mjy: core,
+        core_axes_mas: None,
+        side_length_arcsec,
+    }
+}
+
+fn assumed_values(map: &SkyMap, flags: &mut Vec<Flag>) {
+    let d = &map.description;
+    if d.spectral_index.is_none() {
+        flags.push(Flag::new(flags::SPECTRAL_INDEX_ASSUMED, &[]));
+    }
+    if d.distance_mpc.is_some() && d.redshift.is_some() {
+        flags.push(Flag::new(flags::REDSHIFT_AND_DISTANCE, &[]));
+    }
+}
+
+fn input_record(map: &SkyMap) -> Input {
+    Input {
+        sha256: map.input.sha256.clone(),
+        format: map.input.format.to_owned(),
+        shape: map.input.shape.clone(),
+        dtype: map.input.dtype.clone(),
+    }
+}
+
+fn described(map: &SkyMap) -> BTreeMap<String, Described> {
+    map.description
+        .entries()
+        .into_iter()
+        .map(|(key, value, origin)| (key.to_owned(), Described { value, origin }))
+        .collect()
+}
+
+fn noise_record(
+    observed: &Observed,
+    units: &Units,
+    at: Pixel,
+    peak: Option<f64>,
+    near_rms: Option<f64>,
+) -> NoiseRecord {
+    let rms = observed.noise.rms(at.x, at.y);
+    NoiseRecord {
+        rms_mjy_per_beam: units.bare_brightness(rms),
+        background_mjy_per_beam: units.bare_brightness(observed.noise.background(at.x, at.y)),
+        rms_near_core_mjy_per_beam: near_rms
+            .map_or(Bare::missing(Because::NoRoomForStrip), |r| units.bare_brightness(r)),
+        dynamic_range: peak.map_or(Bare::missing(Because::NoSource), |p| {
+            Bare::number(p / rms, Because::NoNoiseEstimate)
+        }),
+        correlation_fwhm_px: Bare::number(
+            observed.correlation.correlation_fwhm_px(),
+            Because::NoNoiseEstimate,
+        ),
+        method: observed.noise.method.to_owned(),
+    }
+}
+
+fn position(map: &SkyMap, pixel: Pixel) -> Position {
+    let sky = map.geometry.sky(pixel);
+    Position {
+        x_px: pixel.x,
+        y_px: pixel.y,
+        ra_deg: Bare::from_option(sky.map(|s| s.ra_deg), Because::NoCoordinates),
+        dec_deg: Bare::from_option(sky.map(|s| s.dec_deg), Because::NoCoordinates),
+    }
+}
+
+fn source_position(map: &SkyMap, model: &SourceModel) -> OrMissing<SourcePosition> {
+    let (pixel, basis) = match (model.core.pixel, map.host_pixel()) {
+        (Some(pixel), _) => (pixel, PositionBasis::Core),
+        (None, Some(pixel)) => (pixel, PositionBasis::Host),
+        (None, None) => (model.middle, PositionBasis::FluxWeighted),
+    };
+    let Position { x_px, y_px, ra_deg, dec_deg } = position(map, pixel);
+    OrMissing::Present(SourcePosition { ra_deg, dec_deg, x_px, y_px, basis })
+}

@@ -1,0 +1,136 @@
+//! Fluxes of the parts of a source.
+
+use super::units::Units;
+use super::{Findings, end_offset};
+use crate::brightness::{FluxPair, ratio};
+use crate::flux::{Sum, sum_where, widened};
+use crate::measurement::{Because, Measurement};
+use crate::regions::Region;
+use crate::settings::Settings;
+use crate::source::sides::side_of;
+use crate::units::SkyOffset;
+
+/// Sums over the parts of the source.
+pub(super) struct Sums {
+    pub(super) total: Sum,
+    pub(super) contour: Sum,
+    /// By the model's side index.
+    pub(super) sides: [Sum; 2],
+    /// By the record's order; `None` where there is no strip or no lobe.
+    pub(super) lobes: Option<[Sum; 2]>,
+    /// The lobes' second moments across their axes, plane units squared, by record order.
+    pub(super) lobe_width: [Option<f64>; 2],
+    pub(super) beam_area_px: f64,
+}
+
+pub(super) fn sum_parts(findings: &Findings, order: [usize; 2]) -> Sums {
+    let Findings { map, observed, chosen, model, .. } = *findings;
+    let members: Vec<Region> =
+        chosen.members.iter().filter_map(|&k| observed.regions.get(k).cloned()).collect();
+    let beam = &observed.working_beam;
+    let grow = beam.major / map.geometry.mean_scale();
+    let inside = widened(&model.window, &members, map.columns, map.rows, grow);
+    let background_px = observed.noise.background_area_px();
+    let correlation = (&observed.noise, &observed.correlation);
+    let total = sum_where(&model.window, correlation, background_px, |r, c| inside[[r, c]]);
+    let contour = sum_where(&model.window, correlation, background_px, |r, c| {
+        model.window.member[[r, c]] && model.window.brightness[[r, c]] >= model.level
+    });
+    let nothing = Sum::default();
+    let mut sums = Sums {
+        total,
+        contour,
+        sides: [nothing; 2],
+        lobes: None,
+        lobe_width: [None; 2],
+        beam_area_px: beam.area_px(&map.geometry),
+    };
+    let Some((ridges, features)) = &model.sides else { return sums };
+    let offset = |r: usize, c: usize| model.frame.offset(model.coreless.pixel(r, c));
+    let side = |r: usize, c: usize| side_of(ridges, offset(r, c));
+    sums.sides = [0, 1].map(|k| {
+        sum_where(&model.coreless, correlation, background_px, |r, c| {
+            inside[[r, c]] && side(r, c) == k
+        })
+    });
+    if let Some(strips) = &findings.strips {
+        let edge = strips.placed.strip.outer + beam.major;
+        sums.lobes = Some(order.map(|k| {
+            sum_where(&model.coreless, correlation, background_px, |r, c| {
+                inside[[r, c]] && side(r, c) == k && offset(r, c).radius() > edge
+            })
+        }));
+        sums.lobe_width = order.map(|k| {
+            let axis = end_offset(&ridges[k], &features[k])?;
+            let across = SkyOffset::polar(1.0, axis.position_angle_deg() + 90.0);
+            let (mut weight, mut first, mut second) = (0.0, 0.0, 0.0);
+            for ((r, c), &b) in model.coreless.brightness.indexed_iter() {
+                if model.window.member[[r, c]]
+                    && model.coreless.usable(r, c)
+                    && b > 0.0
+                    && side(r, c) == k
+                    && offset(r, c).radius() > edge
+                {
+                    let x = offset(r, c).dot(across);
+                    weight += b;
+                    first += b * x;
+                    second += b * x * x;
+                }
+            }
+            (weight > 0.0).then(|| (second / weight - (first / weight).powi(2)).max(0.0))
+        });
+    }
+    sums
+}
+
+/// The core's flux with noise error only.
+pub(super) fn core_flux_noise(findings: &Findings, units: &Units, sums: &Sums) -> Measurement {
+    let core = &findings.model.core;
+    match (core.fit, core.peak_upper) {
+        (Some(fit), _) => {
+            units.flux_noise(fit.peak * sums.beam_area_px, fit.peak_sigma * sums.beam_area_px)
+        }
+        (None, Some(upper)) => match units.per_pixel {
+            Ok(factor) => Measurement::upper_limit(
+                upper * sums.beam_area_px * factor,
+                findings.settings.confidence,
+            ),
+            Err(because) => Measurement::missing(because),
+        },
+        (None, None) => Measurement::missing(Because::NoCore),
+    }
+}
+
+pub(super) fn core_flux(findings: &Findings, units: &Units, sums: &Sums) -> Measurement {
+    core_flux_noise(findings, units, sums).with_fractional_error(units.scale_error)
+}
+
+pub(super) fn brightest_region(findings: &Findings) -> (f64, f64) {
+    findings
+        .chosen
+        .members
+        .iter()
+        .filter_map(|&k| findings.observed.regions.get(k))
+        .map(|r| {
+            (r.peak.value - findings.observed.noise.background(r.peak.x, r.peak.y), r.peak.snr)
+        })
+        .fold((0.0, 0.0), |a, b| if b.0 > a.0 { b } else { a })
+}
+
+pub(super) fn lobe_flux_ratio(sums: &Sums, settings: &Settings) -> Measurement {
+    let Some([a, b]) = sums.lobes else { return Measurement::missing(Because::NoLobe) };
+    if a.area_px < 1.0 || b.area_px < 1.0 {
+        return Measurement::missing(Because::NoLobe);
+    }
+    ratio(
+        FluxPair {
+            numerator: a.value,
+            denominator: b.value,
+            numerator_variance: a.sigma * a.sigma,
+            denominator_variance: b.sigma * b.sigma,
+            covariance: 0.0,
+        },
+        settings.ratio_value_sigma,
+        settings.confidence,
+    )
+}

@@ -1,0 +1,89 @@
+//! Units put on numbers in the map's own unit, or the reason why that cannot be done.
+
+use crate::map::SkyMap;
+use crate::measurement::{Bare, Because, Measurement};
+use crate::pipeline::Observed;
+
+/// Puts units on numbers in the map's own unit, or says why that cannot be done.
+#[derive(Clone, Copy)]
+pub(super) struct Units {
+    /// mJy/beam per map unit.
+    pub(super) per_beam: Result<f64, Because>,
+    /// mJy per map unit summed over one pixel.
+    pub(super) per_pixel: Result<f64, Because>,
+    /// Fractional error of the flux scale.
+    pub(super) scale_error: f64,
+    /// Plane units are arcsec.
+    pub(super) has_scale: bool,
+    /// Pixels per plane unit.
+    pub(super) px_per_unit: f64,
+}
+
+impl Units {
+    pub(super) fn new(map: &SkyMap, observed: &Observed) -> Self {
+        let because = if map.has_flux_unit() { Because::NoBeam } else { Because::NoFluxUnit };
+        let factors = map.flux_factors(observed.beam.as_ref());
+        Self {
+            per_beam: factors.map(|f| f.mjy_per_beam).ok_or(because),
+            per_pixel: factors.map(|f| f.mjy_per_pixel).ok_or(because),
+            scale_error: map.description.flux_scale_error_or_default().unwrap_or(0.0),
+            has_scale: map.geometry.has_scale(),
+            px_per_unit: 1.0 / map.geometry.mean_scale(),
+        }
+    }
+
+    /// Brightness with noise error only.
+    pub(super) fn brightness_noise(&self, value: f64, sigma: f64) -> Measurement {
+        match self.per_beam {
+            Ok(factor) => Measurement::symmetric(value * factor, sigma * factor),
+            Err(because) => Measurement::missing(because),
+        }
+    }
+
+    /// Brightness with the flux scale's error.
+    pub(super) fn brightness(&self, value: f64, sigma: f64) -> Measurement {
+        self.brightness_noise(value, sigma).with_fractional_error(self.scale_error)
+    }
+
+    /// Flux with noise error only.
+    pub(super) fn flux_noise(&self, sum: f64, sigma: f64) -> Measurement {
+        match self.per_pixel {
+            Ok(factor) => Measurement::symmetric(sum * factor, sigma * factor),
+            Err(because) => Measurement::missing(because),
+        }
+    }
+
+    /// Flux with the flux scale's error.
+    pub(super) fn flux(&self, sum: f64, sigma: f64) -> Measurement {
+        self.flux_noise(sum, sigma).with_fractional_error(self.scale_error)
+    }
+
+    pub(super) fn bare_brightness(&self, value: f64) -> Bare {
+        match self.per_beam {
+            Ok(factor) => Bare::number(value * factor, Because::OutOfDomain),
+            Err(because) => Bare::missing(because),
+        }
+    }
+
+    /// A length in plane units as arcsec.
+    pub(super) fn arcsec(&self, length: Measurement) -> Measurement {
+        if self.has_scale || length.is_missing() {
+            length
+        } else {
+            Measurement::missing(Because::NoPixelScale)
+        }
+    }
+
+    pub(super) fn bare_arcsec(&self, length: f64) -> Bare {
+        if self.has_scale {
+            Bare::number(length, Because::OutOfDomain)
+        } else {
+            Bare::missing(Because::NoPixelScale)
+        }
+    }
+
+    /// A length in plane units as pixels.
+    pub(super) fn px(&self, length: Measurement) -> Measurement {
+        length.scaled(self.px_per_unit)
+    }
+}

@@ -1039,7 +1039,7 @@ pub fn find(key: &str) -> Vec<&'static Quantity> {
         return by_ending;
     }
     let groups = plain.match_indices('.').map(|(end, _)| plain.get(..end).unwrap_or_default());
-    groups.map(exact).filter(|found| !found.is_empty()).last().unwrap_or_default()
+    groups.map(exact).rfind(|found| !found.is_empty()).unwrap_or_default()
 }
 
 /// A path with the number in every pair of brackets left out.

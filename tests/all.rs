@@ -1,4 +1,5 @@
 //! Integration tests, in one binary.
+#![allow(clippy::panic, reason = "helpers of tests stand outside the test functions")]
 
 mod cli;
 mod demo;

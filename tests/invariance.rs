@@ -115,6 +115,9 @@ fn same(name: &str, reference: &Value, other: &Value, all: &mut Vec<String>) {
     }
 }
 
+/// Where a pixel position (column, row) comes to lie.
+type Placing = Box<dyn Fn((f64, f64)) -> (f64, f64)>;
+
 /// A way to store the sky: row order, handedness, what is up.
 #[derive(Clone, Copy, Debug)]
 struct Orientation {
@@ -142,7 +145,7 @@ impl Orientation {
     }
 
     /// The map in this storage, and where a pixel position of the plain one comes to lie.
-    fn stored(self, map: &Array2<f64>) -> (Array2<f64>, impl Fn((f64, f64)) -> (f64, f64)) {
+    fn stored(self, map: &Array2<f64>) -> (Array2<f64>, Placing) {
         let (rows, columns) = map.dim();
         let [x_step, y_step] = self.steps();
         let turned = x_step.0 == 0;
@@ -168,7 +171,7 @@ impl Orientation {
                 new_middle.1 + dx * y_step.0 as f64 + dy * y_step.1 as f64,
             )
         };
-        (array, place)
+        (array, Box::new(place))
     }
 
     fn flags(self) -> Vec<String> {

@@ -207,6 +207,16 @@ fn every_description_key_is_a_flag_with_hyphens() {
 }
 
 #[test]
+fn a_micro_sign_is_as_good_as_a_u() {
+    for sign in ["u", "\u{b5}", "\u{3bc}"] {
+        let run =
+            Run::new(["measure", "a.npy", "--json", "-", "--unit", &format!("{sign}Jy/beam")]);
+        let record = run.file("a.npy", npy_f4(&noise_map(48, 44, 1))).run().stdout_json();
+        assert_eq!(at(&record, "map.unit.value"), "uJy/beam", "{sign}");
+    }
+}
+
+#[test]
 fn explain_finds_paths_indices_and_endings() {
     let explain = |key: &str| Run::new(["explain", key]).run().stdout;
     let by_path = explain("sides[].length_arcsec");

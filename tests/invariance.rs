@@ -320,3 +320,23 @@ fn a_picture_and_an_array_of_the_same_integers_give_the_same_answers() {
     same("<u2, bottom-up", &picture, &array, &mut all);
     assert!(all.is_empty(), "{}", all.join("\n"));
 }
+
+#[test]
+fn without_a_flux_unit_ratios_sizes_and_angles_stay() {
+    let double = double();
+    let map = npy(&double.map(), "<f8", false);
+    let flags = double.flags();
+    let reference = measured("map.npy", &map, &flags);
+    let other = measured("map.npy", &map, &with(&flags, "--unit", "none"));
+    // Brightness, flux, power, temperature: what has a flux unit in its own.
+    let has_flux_unit = |found: &String| {
+        let path = found.split(": ").next().unwrap_or_default();
+        path.split('.').any(|name| {
+            ["_mjy", "_mjy_per_beam", "_mjy2", "_w_per_hz", "_k"].iter().any(|u| name.ends_with(u))
+        })
+    };
+    let changed: Vec<String> =
+        differences(&reference, &other).into_iter().filter(|found| !has_flux_unit(found)).collect();
+    assert!(changed.is_empty(), "{}", changed.join("\n"));
+    assert_eq!(other["source"]["total_flux_density_mjy"]["missing"], "no-flux-unit");
+}

@@ -4,7 +4,7 @@
 use std::ffi::OsString;
 use std::path::PathBuf;
 
-use clap::builder::PossibleValuesParser;
+use clap::builder::{PossibleValue, PossibleValuesParser};
 use clap::{Arg, ArgAction, ArgMatches, Command, value_parser};
 
 use crate::map::description::{DESCRIPTION_KEYS, ValueKind};
@@ -162,7 +162,12 @@ fn measure_command() -> Command {
             .allow_hyphen_values(true)
             .action(ArgAction::Set);
         if let ValueKind::Choice(words) = key.kind {
-            arg = arg.value_parser(PossibleValuesParser::new(words.iter().copied()));
+            // A micro sign, of which there are two, is as good as a u.
+            let value = |word: &'static str| {
+                let micro = ['µ', 'μ'].map(|sign| word.replace('u', &sign.to_string()));
+                PossibleValue::new(word).aliases(micro.into_iter().filter(|m| m != word))
+            };
+            arg = arg.value_parser(PossibleValuesParser::new(words.iter().copied().map(value)));
         }
         command = command.arg(arg);
     }

@@ -119,6 +119,24 @@ pub const QUANTITIES: &[Quantity] = &[
         "own definition of the record",
     ),
     quantity(
+        "core.rivals[].x_px",
+        "px",
+        "",
+        Position,
+        "Column of a rival, 0-based.",
+        "local maximum",
+        PRACTICE,
+    ),
+    quantity(
+        "core.rivals[].y_px",
+        "px",
+        "",
+        Position,
+        "Row of a rival, 0-based.",
+        "local maximum",
+        PRACTICE,
+    ),
+    quantity(
         "core.rivals[].signal_to_noise",
         "",
         "",
@@ -458,6 +476,24 @@ pub const QUANTITIES: &[Quantity] = &[
         Unchanged,
         "Exponent of width ∝ distance^k: 0 cylinder, ½ paraboloid, 1 cone.",
         "fit to the deconvolved widths",
+        PRACTICE,
+    ),
+    quantity(
+        "sides[].hotspot.x_px",
+        "px",
+        "",
+        Position,
+        "Column of the hot spot, 0-based.",
+        "sub-pixel peak",
+        PRACTICE,
+    ),
+    quantity(
+        "sides[].hotspot.y_px",
+        "px",
+        "",
+        Position,
+        "Row of the hot spot, 0-based.",
+        "sub-pixel peak",
         PRACTICE,
     ),
     quantity(
@@ -947,6 +983,15 @@ pub const QUANTITIES: &[Quantity] = &[
         "Blandford & Königl 1979, ApJ 232, 34",
     ),
     quantity(
+        "physics.beaming.other_flow",
+        "",
+        "",
+        Unchanged,
+        "The same closed forms with the exponent of the other kind of flow.",
+        "as physics.beaming, p = 3 + α for 2 + α or the reverse",
+        "Blandford & Königl 1979, ApJ 232, 34",
+    ),
+    quantity(
         "physics.posterior",
         "",
         "",
@@ -977,16 +1022,24 @@ pub const QUANTITIES: &[Quantity] = &[
 ];
 
 /// Finds quantities by path or by the end of one; indices such as `sides[0]` are accepted.
+/// A path inside a group that the table explains as a whole (`core.position.ra_deg`) finds
+/// the group.
 pub fn find(key: &str) -> Vec<&'static Quantity> {
     let plain = without_indices(key);
-    let exact: Vec<_> = QUANTITIES.iter().filter(|q| q.path == plain).collect();
-    if !exact.is_empty() {
-        return exact;
+    let exact = |path: &str| QUANTITIES.iter().filter(|q| q.path == path).collect::<Vec<_>>();
+    let found = exact(&plain);
+    if !found.is_empty() {
+        return found;
     }
-    QUANTITIES
+    let by_ending: Vec<_> = QUANTITIES
         .iter()
         .filter(|q| q.path.strip_suffix(plain.as_str()).is_some_and(|head| head.ends_with('.')))
-        .collect()
+        .collect();
+    if !by_ending.is_empty() {
+        return by_ending;
+    }
+    let groups = plain.match_indices('.').map(|(end, _)| plain.get(..end).unwrap_or_default());
+    groups.map(exact).rfind(|found| !found.is_empty()).unwrap_or_default()
 }
 
 /// A path with the number in every pair of brackets left out.
@@ -1016,7 +1069,8 @@ mod tests {
         assert_eq!(find("sides[0].length_arcsec").len(), 1);
         assert_eq!(find("sides[].length_arcsec").len(), 1);
         assert!(find("length_arcsec").iter().any(|q| q.path == "sides[].lobe.length_arcsec"));
-        assert!(find("no_such_key").is_empty());
+        assert_eq!(find("core.position.ra_deg").first().map(|q| q.path), Some("core.position"));
+        assert!(find("no_such_key").is_empty() && find("core.no_such_key").is_empty());
     }
 
     #[test]

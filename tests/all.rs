@@ -1,6 +1,11 @@
 //! Integration tests, in one binary.
+#![allow(clippy::panic, reason = "helpers of tests stand outside the test functions")]
 
+mod cli;
 mod demo;
+mod hostile;
+mod invariance;
 mod published;
+mod schema;
 mod support;
 mod truth;

@@ -4,7 +4,7 @@
 use std::ffi::OsString;
 use std::path::PathBuf;
 
-use clap::builder::PossibleValuesParser;
+use clap::builder::{PossibleValue, PossibleValuesParser};
 use clap::{Arg, ArgAction, ArgMatches, Command, value_parser};
 
 use crate::map::description::{DESCRIPTION_KEYS, ValueKind};
@@ -32,6 +32,32 @@ Examples:
 Exit status: 0 all maps measured (also where nothing was found), 1 some map failed,
 2 the call was wrong or its output could not be written.";
 
+const EXAMPLES: &str = "\
+Examples:
+  jetspan measure cluster.npy
+  jetspan explain jet_to_counter_jet_ratio
+  jetspan schema record
+`jetspan measure --help` says what a map may be and how it is described.";
+
+const EXPLAIN_EXAMPLES: &str = "\
+A path is looked up with or without its indices. The end of a path is enough, because
+many groups hold the same key: all that end so are shown.
+
+Examples:
+  jetspan explain sides[0].length_arcsec
+  jetspan explain position_angle_deg
+  jetspan explain
+
+Exit status: 0 found, 2 no such quantity (the nearest is named).";
+
+const SCHEMA_EXAMPLES: &str = "\
+The schema (draft 2020-12) says which keys a record holds and which a description may
+hold, because other programs write the one and read the other.
+
+Examples:
+  jetspan schema record > record.schema.json
+  jetspan schema description";
+
 /// The whole command line.
 pub fn command() -> Command {
     Command::new("jetspan")
@@ -40,10 +66,13 @@ pub fn command() -> Command {
         .subcommand_required(true)
         .arg_required_else_help(true)
         .disable_help_subcommand(true)
+        .max_term_width(80)
+        .after_long_help(EXAMPLES)
         .subcommand(measure_command())
         .subcommand(
             Command::new("explain")
                 .about("Says what a quantity of the record means, with unit, formula and source")
+                .after_long_help(EXPLAIN_EXAMPLES)
                 .arg(
                     Arg::new("KEY")
                         .help("path such as sides[0].length_arcsec, or its end; none: list all"),
@@ -52,6 +81,7 @@ pub fn command() -> Command {
         .subcommand(
             Command::new("schema")
                 .about("Prints the JSON schema of a record or of a map description")
+                .after_long_help(SCHEMA_EXAMPLES)
                 .arg(
                     Arg::new("OF")
                         .required(true)
@@ -132,7 +162,12 @@ fn measure_command() -> Command {
             .allow_hyphen_values(true)
             .action(ArgAction::Set);
         if let ValueKind::Choice(words) = key.kind {
-            arg = arg.value_parser(PossibleValuesParser::new(words.iter().copied()));
+            // A micro sign, of which there are two, is as good as a u.
+            let value = |word: &'static str| {
+                let micro = ['µ', 'μ'].map(|sign| word.replace('u', &sign.to_string()));
+                PossibleValue::new(word).aliases(micro.into_iter().filter(|m| m != word))
+            };
+            arg = arg.value_parser(PossibleValuesParser::new(words.iter().copied().map(value)));
         }
         command = command.arg(arg);
     }

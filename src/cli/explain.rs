@@ -26,7 +26,7 @@ pub fn run(matches: &ArgMatches) -> Result<u8, CliError> {
                     .map(|q| q.path)
                     .chain(QUANTITIES.iter().map(|q| last(q.path)))
                     .collect();
-                let near = nearest(key, names.into_iter())
+                let near = nearest(key, names)
                     .map_or(String::new(), |name| format!(" (nearest: `{name}`)"));
                 return Err(CliError::UnknownQuantity { found: key.clone(), near });
             }

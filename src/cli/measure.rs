@@ -1,14 +1,15 @@
 //! `jetspan measure MAP...`: reads, measures and writes maps one after the other. A map that
 //! fails becomes a failed record and the rest goes on.
 
-use std::collections::HashSet;
 use std::path::{Path, PathBuf};
 
 use clap::ArgMatches;
 
 use super::{ALL_MEASURED, CliError, SOME_FAILED, args, messages};
 use crate::map::SkyMap;
-use crate::map::description::{Layer, MapDescription, read_defaults, read_sidecar, resolve};
+use crate::map::description::{
+    Layer, MapDescription, read_defaults, read_sidecar, resolve, sidecar_path,
+};
 use crate::map::manifest::Manifest;
 use crate::map::read::read_map_file;
 use crate::measurement::{Because, OrMissing};
@@ -36,16 +37,23 @@ pub fn run(matches: &ArgMatches) -> Result<u8, CliError> {
     let mut target = match output {
         None => None,
         Some(path) => {
-            refuse_input_as_output(path, &maps)?;
+            let listed = ["defaults", "manifest"];
+            let descriptions =
+                listed.iter().filter_map(|id| matches.get_one::<PathBuf>(id)).cloned();
+            let inputs = maps.iter().flat_map(|map| [map.clone(), sidecar_path(map)]);
+            refuse_input_as_output(path, inputs.chain(descriptions))?;
             Some(Target::open(path)?)
         }
     };
-    let on_screen = !target.as_ref().is_some_and(Target::is_standard_output);
+    let mut screen = Screen {
+        open: !target.as_ref().is_some_and(Target::is_standard_output),
+        alone: target.is_none(),
+    };
     let many = maps.len() > 1;
     let progress = messages::Progress::new(maps.len());
     let mut failed = 0;
-    if on_screen && many {
-        print(&table::summary_head())?;
+    if many {
+        screen.print(&table::summary_head())?;
     }
     for (done, path) in maps.iter().enumerate() {
         progress.show(done, failed);
@@ -60,8 +68,9 @@ pub fn run(matches: &ArgMatches) -> Result<u8, CliError> {
         if let Some(target) = &mut target {
             target.write(json::record(&record, many).as_bytes())?;
         }
-        if on_screen {
-            print(&if many { table::summary_row(&record) } else { table::full(&record) })?;
+        if screen.open {
+            let text = if many { table::summary_row(&record) } else { table::full(&record) };
+            screen.print(&text)?;
         }
     }
     progress.end();
@@ -146,12 +155,37 @@ fn measure_file(path: &Path, layers: &Layers, settings: &Settings) -> Record {
     }
 }
 
-/// An output that would overwrite one of the maps is refused.
-fn refuse_input_as_output(output: &Path, maps: &[PathBuf]) -> Result<(), WriteError> {
+/// An output that would overwrite one of the files read is refused.
+fn refuse_input_as_output(
+    output: &Path,
+    inputs: impl Iterator<Item = PathBuf>,
+) -> Result<(), WriteError> {
     let Ok(output_file) = output.canonicalize() else { return Ok(()) };
-    let inputs: HashSet<PathBuf> = maps.iter().filter_map(|m| m.canonicalize().ok()).collect();
-    if inputs.contains(&output_file) {
+    if inputs.filter_map(|input| input.canonicalize().ok()).any(|input| input == output_file) {
         return Err(WriteError::OutputIsInput { path: output.to_path_buf() });
     }
     Ok(())
+}
+
+/// The table on the screen. Once nobody reads it any more it is left out, and the records
+/// that go to a file are still written.
+struct Screen {
+    open: bool,
+    /// Whether a closed pipe ends the call: there is nothing else to write.
+    alone: bool,
+}
+
+impl Screen {
+    fn print(&mut self, text: &str) -> Result<(), WriteError> {
+        if !self.open {
+            return Ok(());
+        }
+        match print(text) {
+            Err(WriteError::ClosedPipe) if !self.alone => {
+                self.open = false;
+                Ok(())
+            }
+            result => result,
+        }
+    }
 }

@@ -2,9 +2,18 @@
 
 use std::io::{IsTerminal, Write};
 
-/// One line that says what went wrong.
+/// One line that says what went wrong, whatever file names and damaged files put into it.
 pub fn error(message: &str) {
-    let _ = writeln!(std::io::stderr().lock(), "error: {message}");
+    let _ = writeln!(std::io::stderr().lock(), "error: {}", printable(message));
+}
+
+/// Text without control characters: they are written as escapes.
+fn printable(text: &str) -> String {
+    let mut out = String::with_capacity(text.len());
+    for c in text.chars() {
+        if c.is_control() { out.extend(c.escape_default()) } else { out.push(c) }
+    }
+    out
 }
 
 /// Progress over several maps: one line that is rewritten, only on a terminal.
@@ -32,5 +41,15 @@ impl Progress {
         if self.shown {
             let _ = write!(std::io::stderr().lock(), "\r{:40}\r", "");
         }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn control_characters_are_escaped_and_letters_are_not() {
+        assert_eq!(printable("a\nb\u{1b}[31m µ"), "a\\nb\\u{1b}[31m µ");
     }
 }

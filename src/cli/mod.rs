@@ -9,7 +9,10 @@ mod messages;
 use std::ffi::OsString;
 use std::process::ExitCode;
 
+use clap::error::ErrorKind;
+
 use crate::record::Record;
+use crate::write::WriteError;
 
 /// All maps measured (also where nothing was found on them).
 const ALL_MEASURED: u8 = 0;
@@ -22,12 +25,7 @@ const USAGE: u8 = 2;
 pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     let matches = match args::command().try_get_matches_from(arguments) {
         Ok(matches) => matches,
-        Err(error) => {
-            let code = if error.use_stderr() { USAGE } else { ALL_MEASURED };
-            // A closed pipe is no reason to complain.
-            let _ = error.print();
-            return ExitCode::from(code);
-        }
+        Err(error) => return ExitCode::from(refused(&error)),
     };
     let outcome = match matches.subcommand() {
         Some(("measure", matches)) => measure::run(matches),
@@ -37,11 +35,54 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     };
     match outcome {
         Ok(code) => ExitCode::from(code),
+        // The reader has seen enough.
+        Err(CliError::Write(WriteError::ClosedPipe)) => ExitCode::from(ALL_MEASURED),
         Err(error) => {
             messages::error(&error.to_string());
             ExitCode::from(USAGE)
         }
     }
+}
+
+/// Help, the version, or what was wrong with the call; gives the exit status.
+fn refused(error: &clap::Error) -> u8 {
+    match error.kind() {
+        ErrorKind::DisplayHelp
+        | ErrorKind::DisplayVersion
+        | ErrorKind::DisplayHelpOnMissingArgumentOrSubcommand => {
+            // A closed pipe is no reason to complain.
+            let _ = error.print();
+            if error.use_stderr() { USAGE } else { ALL_MEASURED }
+        }
+        _ => {
+            messages::error(&format!(
+                "{}; --help lists all",
+                one_line(&error.render().to_string())
+            ));
+            USAGE
+        }
+    }
+}
+
+/// The paragraphs of the parser's message before its usage line, as one line.
+fn one_line(message: &str) -> String {
+    let mut line = String::new();
+    for part in message
+        .strip_prefix("error: ")
+        .unwrap_or(message)
+        .lines()
+        .map(str::trim)
+        .filter(|part| !part.is_empty())
+        .take_while(|part| !part.starts_with("Usage:") && !part.starts_with("For more"))
+    {
+        match line.chars().last() {
+            None => {}
+            Some(':') => line.push(' '),
+            Some(_) => line.push_str("; "),
+        }
+        line.push_str(part);
+    }
+    line
 }
 
 /// Why a call ended without its result.
@@ -54,7 +95,7 @@ enum CliError {
     #[error(transparent)]
     Cosmology(#[from] crate::physics::CosmologyError),
     #[error(transparent)]
-    Write(#[from] crate::write::WriteError),
+    Write(#[from] WriteError),
     #[error(
         "no map named and no --manifest; name at least one map file, such as `jetspan measure MAP`"
     )]
@@ -71,4 +112,16 @@ fn schema(matches: &clap::ArgMatches) -> Result<u8, CliError> {
     let text = serde_json::to_string_pretty(&schema).unwrap_or_default();
     crate::write::print(&format!("{text}\n"))?;
     Ok(ALL_MEASURED)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn the_parsers_paragraphs_become_one_line() {
+        let text =
+            "error: the following arguments were not provided:\n  <OF>\n\n  tip: x\n\nUsage: y\n";
+        assert_eq!(one_line(text), "the following arguments were not provided: <OF>; tip: x");
+    }
 }

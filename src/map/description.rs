@@ -332,6 +332,18 @@ pub enum DescriptionError {
         /// The key.
         key: String,
     },
+    /// Brightnesses whose squares no longer fit into a number.
+    #[error(
+        "the brightest pixel is {largest:e} in size, needed is {least:e} to {most:e}: check value_scale and value_transfer, give blanks as blank_value, or choose another unit"
+    )]
+    BrightnessRange {
+        /// Largest size of a brightness.
+        largest: f64,
+        /// Smallest that is measured.
+        least: f64,
+        /// Largest that is measured.
+        most: f64,
+    },
     /// A value of the wrong type or outside its range.
     #[error("{place}: {key} is {found}, needed is {needed}")]
     BadValue {
@@ -401,6 +413,7 @@ impl DescriptionError {
             Self::UnknownKey { .. } => "unknown-key",
             Self::DuplicateKey { .. } => "duplicate-key",
             Self::BadValue { .. } => "bad-description-value",
+            Self::BrightnessRange { .. } => "brightness-range",
             Self::Conflict { .. } => "conflicting-keys",
             Self::Incomplete { .. } => "incomplete-keys",
             Self::Syntax { .. } => "description-syntax",
@@ -668,6 +681,10 @@ pub fn sidecar_path(map_path: &Path) -> PathBuf {
 /// # Errors
 /// A file that cannot be read or is no description.
 pub fn read_sidecar(map_path: &Path) -> Result<Option<Layer>, DescriptionError> {
+    if map_path.file_name().is_none() {
+        // `.` or `/`: a folder, which reading the map refuses.
+        return Ok(None);
+    }
     let path = sidecar_path(map_path);
     match path.try_exists() {
         Ok(false) => Ok(None),

@@ -120,7 +120,7 @@ fn a_block_of_fill_becomes_blank_and_a_floor_does_not() {
 
 #[test]
 fn flux_factors_use_the_beam_area_in_pixels() {
-    let numbers = [0.0; 16];
+    let numbers = [0.0; 144];
     let text = |unit: &str| {
         format!(
             r#"{{"pixel_scale_arcsec": [0.5, 0.25], "beam_major_arcsec": 3,
@@ -134,15 +134,15 @@ fn flux_factors_use_the_beam_area_in_pixels() {
         ("uJy/beam", 1e-3, 1e-3 / area_px),
         ("mJy/pixel", area_px, 1.0),
     ] {
-        let m = map("float32", 4, &numbers, &text(unit));
+        let m = map("float32", 12, &numbers, &text(unit));
         let got = m.flux_factors(m.beam.as_ref()).expect("a flux unit");
         assert!((got.mjy_per_beam / per_beam - 1.0).abs() < 1e-12, "{unit}");
         assert!((got.mjy_per_pixel / per_pixel - 1.0).abs() < 1e-12, "{unit}");
         assert_eq!(m.flux_factors(None), None);
     }
-    let m = map("float32", 4, &numbers, &text("none"));
+    let m = map("float32", 12, &numbers, &text("none"));
     assert_eq!(m.flux_factors(m.beam.as_ref()), None);
-    let m = map("float32", 4, &numbers, r#"{"beam_major_arcsec": 3}"#);
+    let m = map("float32", 12, &numbers, r#"{"beam_major_arcsec": 3}"#);
     assert_eq!(m.beam, None, "a beam in arcsec cannot be laid on pixels of unknown size");
 }
 

@@ -29,6 +29,10 @@ pub use read::{Samples, StoredArray};
 /// saturated; fewer are the peak of a picture scaled to its maximum.
 const MIN_SATURATED_PIXELS: usize = 64;
 
+/// Brightest pixels that are measured, in the map's unit: fourth powers stay far inside
+/// double precision.
+const BRIGHTEST: std::ops::RangeInclusive<f64> = 1e-60..=1e60;
+
 /// What is known about the file a map came from.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize, JsonSchema)]
 pub struct InputFacts {
@@ -102,7 +106,8 @@ impl SkyMap {
     /// connected blocks of one fill value. Then brightness = offset + scale × f(stored).
     ///
     /// # Errors
-    /// A core outside the array.
+    /// A core outside the array, a beam longer than the map, brightnesses so large or small
+    /// that their squares do not fit into a number.
     pub fn from_stored(
         mut stored: StoredArray,
         mut description: MapDescription,
@@ -113,6 +118,7 @@ impl SkyMap {
         let geometry = SkyGeometry::new(rows, columns, &description, format_rows);
         check_core(&description, &geometry)?;
         let beam = geometry.has_scale().then(|| described_beam(&description)).flatten();
+        check_beam(beam, &geometry)?;
 
         let input = InputFacts::of(&stored);
         let is_single = matches!(stored.samples, Samples::F32(_));
@@ -157,6 +163,7 @@ impl SkyMap {
                 *value = if linear.is_finite() { linear } else { f64::NAN };
             }
         }
+        check_brightness(&values)?;
         let blank_count = values.iter().filter(|v| v.is_nan()).count();
         let samples = if is_single && unchanged {
             // Exact: the values are the stored single-precision numbers or blank.
@@ -306,6 +313,30 @@ fn check_core(
                 needed: format!("between 0 and {last}: the map has {length} {what}"),
             });
         }
+    }
+    Ok(())
+}
+
+/// A beam longer than the whole map: one of the two is not in arcsec.
+fn check_beam(beam: Option<Beam>, geometry: &SkyGeometry) -> Result<(), DescriptionError> {
+    let side = geometry.rows().max(geometry.columns()) as f64;
+    match beam.map(|beam| (beam.major, beam.major / geometry.mean_scale())) {
+        Some((arcsec, pixels)) if pixels > side => Err(DescriptionError::BadValue {
+            place: "map description".to_owned(),
+            key: "beam_major_arcsec",
+            found: format!("{arcsec} ({pixels:.3e} px)"),
+            needed: format!("at most the map's longer side, {side} px: mend it or the pixel scale"),
+        }),
+        _ => Ok(()),
+    }
+}
+
+fn check_brightness(values: &[f64]) -> Result<(), DescriptionError> {
+    let largest = values.iter().filter(|v| v.is_finite()).fold(0.0, |a: f64, v| a.max(v.abs()));
+    // Zero everywhere is another complaint's matter.
+    if largest > 0.0 && !BRIGHTEST.contains(&largest) {
+        let (&least, &most) = (BRIGHTEST.start(), BRIGHTEST.end());
+        return Err(DescriptionError::BrightnessRange { largest, least, most });
     }
     Ok(())
 }

@@ -20,8 +20,8 @@ pub enum WriteError {
         /// The system's reason.
         reason: String,
     },
-    /// The target is one of the maps.
-    #[error("{} is one of the maps; name another file for the output", path.display())]
+    /// The target is one of the files read.
+    #[error("{} is read by this call; name another file for the output", path.display())]
     OutputIsInput {
         /// The file.
         path: PathBuf,
@@ -32,6 +32,9 @@ pub enum WriteError {
         /// The system's reason.
         reason: String,
     },
+    /// Whoever read standard output has stopped reading: no failure, but no reason to go on.
+    #[error("standard output was closed")]
+    ClosedPipe,
 }
 
 /// Where results go: standard output, or a file that appears whole or not at all.
@@ -129,10 +132,10 @@ fn new_file_in(folder: &Path) -> std::io::Result<NamedTempFile> {
     builder.tempfile_in(folder)
 }
 
-/// Prints text; a closed pipe ends quietly.
+/// Prints text.
 ///
 /// # Errors
-/// Where standard output cannot be written for another reason.
+/// [`WriteError::ClosedPipe`] where nobody reads any more, else the system's reason.
 pub fn print(text: &str) -> Result<(), WriteError> {
     print_bytes(text.as_bytes())
 }
@@ -141,7 +144,7 @@ fn print_bytes(bytes: &[u8]) -> Result<(), WriteError> {
     let mut out = std::io::stdout().lock();
     match out.write_all(bytes).and_then(|()| out.flush()) {
         Ok(()) => Ok(()),
-        Err(e) if e.kind() == ErrorKind::BrokenPipe => Ok(()),
+        Err(e) if e.kind() == ErrorKind::BrokenPipe => Err(WriteError::ClosedPipe),
         Err(e) => Err(WriteError::StandardOutput { reason: e.to_string() }),
     }
 }

@@ -9,7 +9,7 @@
 //!   ──assemble──► Record ──write──► JSON | table
 //! ```
 //! Each arrow is a function of its inputs and settings alone: no clock, no printing. Files
-//! are touched in [`cli`], [`map::read`] and [`write`] only.
+//! are touched in [`cli`], [`map::read`] and [`mod@write`] only.
 //!
 //! # Conventions
 //! - Position angles: degrees from north through east; directed ones (a jet, a side) in

@@ -110,7 +110,8 @@ impl Measurement {
     pub fn with_ci95(self, low: f64, high: f64) -> Self {
         match self {
             Self::Value { value, minus, plus, .. } if low.is_finite() && high.is_finite() => {
-                Self::Value { value, minus, plus, ci95: Some([low, high]) }
+                // Rounding may not leave the value outside its own interval.
+                Self::Value { value, minus, plus, ci95: Some([low.min(value), high.max(value)]) }
             }
             other => other,
         }

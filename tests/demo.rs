@@ -137,3 +137,25 @@ fn demo_record_agrees_with_the_scene() {
         assert_ne!(flag["severity"], "caution", "{flag}");
     }
 }
+
+#[test]
+fn readme_shows_the_demo_as_it_is_measured() {
+    let root = PathBuf::from(env!("CARGO_MANIFEST_DIR"));
+    let path = root.join("README.md");
+    let readme = std::fs::read_to_string(&path).expect("README.md is there");
+    let opening = "```text\n";
+    let start = readme.find(opening).expect("the page follows the first command") + opening.len();
+    let end = start + readme[start..].find("```").expect("the block ends");
+    let printed = std::process::Command::new(crate::support::program())
+        .args(["measure", "demo-images/lantern-double.npy"])
+        .current_dir(&root)
+        .output()
+        .expect("the program runs");
+    let page = String::from_utf8(printed.stdout).expect("text");
+    if std::env::var_os("JETSPAN_REGENERATE").is_some() {
+        let fresh = format!("{}{page}{}", &readme[..start], &readme[end..]);
+        std::fs::write(&path, fresh).expect("README.md may be written");
+    } else {
+        assert_eq!(&readme[start..end], page, "run JETSPAN_REGENERATE=1 cargo test --release demo");
+    }
+}

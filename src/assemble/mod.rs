@@ -16,7 +16,7 @@ use self::roles::order_sides;
 use self::shape::{arms, fr_ratios, measure_extents};
 use self::side::side_record;
 use self::strips::brightness_record;
-use self::sums::{brightest_region, core_flux, core_flux_noise, lobe_flux_ratio, sum_parts};
+use self::sums::{brightest_region, core_sum, lobe_flux_ratio, sum_parts};
 use self::units::Units;
 use crate::brightness::{PlacedStrip, StripPair};
 use crate::class::classify;
@@ -167,7 +167,8 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     let order = order_sides(findings, &mut flags);
 
     let sums = sum_parts(findings, order.index);
-    let core_flux = core_flux(findings, &units, &sums);
+    let core_sum = core_sum(findings, &sums);
+    let core_flux = units.flux_of(core_sum);
     let total = units.flux(sums.total.value, sums.total.sigma);
 
     let components = component_records(findings, &units);
@@ -217,10 +218,9 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     } else {
         Status::Measured
     };
-    let prominence = physics::emission::core_prominence(
-        core_flux_noise(findings, &units, &sums),
-        units.flux_noise(sums.total.value, sums.total.sigma),
-    );
+    // In the map's own unit: a ratio needs no flux scale, and its error cancels.
+    let total_sum = Measurement::symmetric(sums.total.value, sums.total.sigma);
+    let prominence = physics::emission::core_prominence(core_sum, total_sum);
     let source = SourceRecord {
         position: source_position(map, model),
         total_flux_density_mjy: total,

@@ -208,7 +208,7 @@ pub(super) fn jet_flux(findings: &Findings, units: &Units, k: usize) -> Measurem
         return Measurement::missing(Because::NoRoomForStrip);
     };
     let (sum, sigma) = (strips.pair.fluxes[k].sum, strips.pair.variance[k].sqrt());
-    if !(sigma > 0.0) {
+    if sigma <= 0.0 {
         return Measurement::missing(Because::BlankPixels);
     }
     if sum >= findings.settings.ratio_value_sigma * sigma {

@@ -1,6 +1,5 @@
 //! Fluxes of the parts of a source.
 
-use super::units::Units;
 use super::{Findings, end_offset};
 use crate::brightness::{FluxPair, ratio};
 use crate::flux::{Sum, sum_where, widened};
@@ -83,30 +82,19 @@ pub(super) fn sum_parts(findings: &Findings, order: [usize; 2]) -> Sums {
     sums
 }
 
-/// The core's flux with noise error only.
-pub(super) fn core_flux_noise(findings: &Findings, units: &Units, sums: &Sums) -> Measurement {
+/// The core's flux in map unit × pixels, with noise error only.
+pub(super) fn core_sum(findings: &Findings, sums: &Sums) -> Measurement {
     let core = &findings.model.core;
     if findings.observed.beam.is_none() {
         // The flux of a beam-shaped component is its peak times the beam's area.
         return Measurement::missing(Because::NoBeam);
     }
+    let area = sums.beam_area_px;
     match (core.fit, core.peak_upper) {
-        (Some(fit), _) => {
-            units.flux_noise(fit.peak * sums.beam_area_px, fit.peak_sigma * sums.beam_area_px)
-        }
-        (None, Some(upper)) => match units.per_pixel {
-            Ok(factor) => Measurement::upper_limit(
-                upper * sums.beam_area_px * factor,
-                findings.settings.confidence,
-            ),
-            Err(because) => Measurement::missing(because),
-        },
+        (Some(fit), _) => Measurement::symmetric(fit.peak * area, fit.peak_sigma * area),
+        (None, Some(upper)) => Measurement::upper_limit(upper * area, findings.settings.confidence),
         (None, None) => Measurement::missing(Because::NoCore),
     }
-}
-
-pub(super) fn core_flux(findings: &Findings, units: &Units, sums: &Sums) -> Measurement {
-    core_flux_noise(findings, units, sums).with_fractional_error(units.scale_error)
 }
 
 pub(super) fn brightest_region(findings: &Findings) -> (f64, f64) {

@@ -65,6 +65,15 @@ impl Units {
         self.flux_noise(sum, sigma).with_fractional_error(self.scale_error)
     }
 
+    /// A flux in map unit × pixels, with the flux scale's error.
+    pub(super) fn flux_of(&self, sum: Measurement) -> Measurement {
+        match self.per_pixel {
+            Ok(factor) => sum.scaled(factor).with_fractional_error(self.scale_error),
+            Err(_) if sum.is_missing() => sum,
+            Err(because) => Measurement::missing(because),
+        }
+    }
+
     pub(super) fn bare_brightness(&self, value: f64) -> Bare {
         match self.per_beam {
             Ok(factor) => Bare::number(value * factor, Because::OutOfDomain),

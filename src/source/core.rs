@@ -77,6 +77,7 @@ const CORE_DETECTION_SIGMA: f64 = 3.0;
 ///
 /// `ends` are the two farthest points of the source's contour; `frame` any local frame of
 /// the map; `z_confidence` the normal deviate of the limits' confidence.
+#[expect(clippy::too_many_arguments, reason = "each is one plain input of the stage")]
 pub fn choose_core(
     window: &Window,
     peaks: &[Peak],
@@ -556,9 +557,9 @@ mod tests {
     fn inverse_times_matrix_is_one() {
         let m = vec![vec![4.0, 1.0, 0.5], vec![1.0, 3.0, 0.2], vec![0.5, 0.2, 2.0]];
         let inverse = invert_symmetric(&m).expect("positive definite");
-        for i in 0..3 {
+        for (i, row) in inverse.iter().enumerate() {
             for j in 0..3 {
-                let product: f64 = (0..3).map(|k| inverse[i][k] * m[k][j]).sum();
+                let product: f64 = row.iter().zip(&m).map(|(a, line)| a * line[j]).sum();
                 assert!((product - f64::from(u8::from(i == j))).abs() < 1e-12);
             }
         }

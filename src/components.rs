@@ -166,7 +166,14 @@ pub fn fit_components(
     };
     let last = Limits { evaluations: settings.evaluations_per_fit, precision: 1e-4, ..limits };
     let fit = search.polished(fit, &last);
-    let covariances = covariance(&pixels, &fit, correlation);
+    // Where the Gaussians do not describe the source, what is left counts as noise of the same
+    // correlation (common practice: errors times the square root of the reduced χ²).
+    let misfit = pixels.residual_over_noise(&fit.residual);
+    let excess = misfit.powi(2).max(1.0);
+    let covariances = covariance(&pixels, &fit, correlation).map(|mut list| {
+        list.iter_mut().flatten().flatten().for_each(|value| *value *= excess);
+        list
+    });
     let mut components: Vec<Component> = fit
         .gaussians
         .iter()
@@ -179,7 +186,7 @@ pub fn fit_components(
     components.sort_by(|a, b| b.flux.total_cmp(&a.flux));
     FitReport {
         components,
-        residual_rms_over_noise: pixels.residual_over_noise(&fit.residual),
+        residual_rms_over_noise: misfit,
         evaluations: search.spent,
         converged: fit.converged,
         truncated,

@@ -1,6 +1,7 @@
 //! Units put on numbers in the map's own unit, or the reason why that cannot be done.
 
 use crate::map::SkyMap;
+use crate::map::description::BrightnessUnit;
 use crate::measurement::{Bare, Because, Measurement};
 use crate::pipeline::Observed;
 
@@ -21,6 +22,19 @@ pub(super) struct Units {
     pub(super) has_beam: bool,
 }
 
+/// Least fractional error of a flux whose beam was read off the noise: a dirty beam's noise is
+/// not quite the restoring beam's.
+const ESTIMATED_BEAM_ERROR: f64 = 0.15;
+
+/// Fractional error of fluxes: the flux scale's, and the beam's area where it was estimated
+/// and the unit is per beam.
+fn scale_error(map: &SkyMap, observed: &Observed) -> f64 {
+    let scale = map.description.flux_scale_error_or_default().unwrap_or(0.0);
+    let per_beam = map.description.unit.is_some_and(BrightnessUnit::is_per_beam);
+    let estimated = map.beam.is_none() && observed.beam.is_some();
+    if estimated && per_beam { scale.hypot(ESTIMATED_BEAM_ERROR) } else { scale }
+}
+
 impl Units {
     pub(super) fn new(map: &SkyMap, observed: &Observed) -> Self {
         let because = if map.has_flux_unit() { Because::NoBeam } else { Because::NoFluxUnit };
@@ -32,7 +46,7 @@ impl Units {
                 .map(|f| f.mjy_per_pixel)
                 .or_else(|| map.mjy_per_pixel_without_beam())
                 .ok_or(because),
-            scale_error: map.description.flux_scale_error_or_default().unwrap_or(0.0),
+            scale_error: scale_error(map, observed),
             has_scale: map.geometry.has_scale(),
             px_per_unit: 1.0 / map.geometry.mean_scale(),
             has_beam: observed.beam.is_some(),

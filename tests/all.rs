@@ -8,4 +8,5 @@ mod invariance;
 mod published;
 mod schema;
 mod support;
+mod survey;
 mod truth;

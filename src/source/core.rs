@@ -173,7 +173,24 @@ fn core_at_host(
     core
 }
 
+/// A candidate where neither core nor host is known.
+struct Candidate {
+    peak: Peak,
+    fit: PointFit,
+    /// Place along the source's longest chord, 0 to 1 from end to end.
+    along: f64,
+    basis: CoreBasis,
+    weight: f64,
+}
+
+/// Peaks fainter than this share of the brightest do not count as the source's outermost.
+const OUTERMOST_BRIGHTNESS: f64 = 0.1;
+
 /// The core where neither it nor the host is known.
+///
+/// Between the outermost peaks a candidate counts by how compact and how central it is. An
+/// outermost peak is the core only of a one-sided source: it must outshine every other peak
+/// by more than two to one; two alike are hot spots, and then no core is chosen.
 fn core_without_host(
     peaks: &[Peak],
     ends: [Pixel; 2],
@@ -183,42 +200,49 @@ fn core_without_host(
 ) -> Core {
     let axis = frame.difference(ends[0], ends[1]);
     let length = axis.radius();
-    struct Candidate {
-        peak: Peak,
-        fit: PointFit,
-        central: f64,
-        compact: f64,
-        weight: f64,
-    }
+    let place =
+        |pixel: Pixel| frame.difference(ends[0], pixel).dot(axis) / (length * length).max(1e-300);
     let brightest = peaks.iter().map(|p| p.value).fold(0.0, f64::max);
+    let outer = peaks.iter().filter(|p| p.value >= OUTERMOST_BRIGHTNESS * brightest);
+    let (low, high) = outer.fold((f64::INFINITY, f64::NEG_INFINITY), |(low, high), p| {
+        (low.min(place(p.pixel)), high.max(place(p.pixel)))
+    });
     let mut candidates: Vec<Candidate> = peaks
         .iter()
         .filter_map(|peak| {
             let fit = fit_at(peak.pixel, true)?;
-            if fit.peak <= CORE_DETECTION_SIGMA * fit.peak_sigma
-                || frame.separation(fit.pixel, peak.pixel) > 0.75 * beam.major
-            {
+            let wanders = frame.separation(fit.pixel, peak.pixel) > 0.75 * beam.major;
+            if fit.peak <= CORE_DETECTION_SIGMA * fit.peak_sigma || wanders {
                 return None;
             }
-            let along =
-                frame.difference(ends[0], fit.pixel).dot(axis) / (length * length).max(1e-300);
-            // 1 in the middle, 0 at the ends.
-            let central = (1.0 - 2.0 * (along - 0.5).abs()).clamp(0.0, 1.0);
+            let along = place(peak.pixel);
             // Share of the peak that is beam-shaped: 1 for a point on nothing.
             let compact = (fit.peak / peak.value.max(fit.peak)).clamp(0.0, 1.0);
-            Some(Candidate { peak: *peak, fit, central, compact, weight: 0.0 })
+            let central = (1.0 - (2.0 * (along - low) / (high - low) - 1.0).abs()).max(0.0);
+            let single = (high - low) * length < 0.5 * beam.major;
+            let rival = peaks
+                .iter()
+                .filter(|other| frame.separation(other.pixel, peak.pixel) > 0.5 * beam.major)
+                .map(|other| other.value / peak.value)
+                .fold(0.0, f64::max);
+            let (basis, fitness) = if single && (along - 0.5).abs() < 0.2 {
+                (CoreBasis::CompactCentral, 1.0)
+            } else if !single && central > 0.1 {
+                (CoreBasis::CompactCentral, central)
+            } else {
+                (CoreBasis::OneSidedEnd, (1.0 - 2.0 * rival).max(0.0))
+            };
+            Some(Candidate { peak: *peak, fit, along, basis, weight: compact.powi(2) * fitness })
         })
         .collect();
-    let resolved = length > 2.5 * beam.major;
-    for c in &mut candidates {
-        let bright = (c.peak.value / brightest.max(f64::MIN_POSITIVE)).sqrt();
-        let middle = c.compact.powi(2) * c.central.powi(2);
-        let end = c.compact.powi(2) * (1.0 - c.central).powi(4) * bright.powi(6);
-        c.weight = if resolved { middle.max(0.8 * end) } else { c.compact * bright };
-    }
-    candidates.sort_by(|a, b| b.weight.total_cmp(&a.weight));
+    // Equal weights: the more central one, so that no order of the peaks decides.
+    candidates.sort_by(|a, b| {
+        let by_weight = b.weight.total_cmp(&a.weight);
+        by_weight.then((a.along - 0.5).abs().total_cmp(&(b.along - 0.5).abs()))
+    });
     let total: f64 = candidates.iter().map(|c| c.weight).sum();
-    let Some(best) = candidates.first().filter(|c| c.weight > 0.05) else {
+    let Some((best, others)) = candidates.split_first().filter(|(best, _)| best.weight > 0.05)
+    else {
         return Core {
             pixel: None,
             position_sigma: 0.0,
@@ -229,17 +253,12 @@ fn core_without_host(
             peak_upper: None,
         };
     };
-    let basis = if best.central >= 0.4 || !resolved {
-        CoreBasis::CompactCentral
-    } else {
-        CoreBasis::OneSidedEnd
-    };
     Core {
         pixel: Some(best.fit.pixel),
         position_sigma: best.fit.position_sigma,
-        basis,
+        basis: best.basis,
         confidence: (best.weight / total * best.weight.sqrt().min(1.0)).clamp(0.0, 0.9),
-        rivals: candidates[1..].iter().map(|c| (c.peak, c.weight / total)).collect(),
+        rivals: others.iter().map(|c| (c.peak, c.weight / total)).collect(),
         fit: Some(best.fit),
         peak_upper: None,
     }
@@ -547,6 +566,16 @@ mod tests {
         let found = choose(&window(&all, 0.0, 0.0), KnownCore::default(), &peaks);
         assert_eq!(found.basis, CoreBasis::CompactCentral);
         assert!(found.pixel.expect("a core").distance_px(Pixel::new(30.4, 30.2)) < 0.01);
+
+        // Two alike are hot spots: no core is invented.
+        let none = choose(&window(&lobes, 0.0, 0.0), KnownCore::default(), &lobe_peaks);
+        assert_eq!((none.basis, none.pixel), (CoreBasis::None, None));
+        // A bright end with a knot of a fifth is a core with a one-sided jet.
+        let jet = [(Pixel::new(18.0, 30.0), 10.0), (Pixel::new(38.0, 30.0), 2.0)];
+        let jet_peaks: Vec<Peak> = jet.iter().map(|(p, v)| peak(*p, *v)).collect();
+        let end = choose(&window(&jet, 0.0, 0.0), KnownCore::default(), &jet_peaks);
+        assert_eq!(end.basis, CoreBasis::OneSidedEnd);
+        assert!(end.pixel.expect("a core").distance_px(Pixel::new(18.0, 30.0)) < 0.01);
 
         let given = KnownCore { given: Some(Pixel::new(25.0, 31.0)), host: host.host };
         let used = choose(&window(&all, 0.0, 0.0), given, &peaks);

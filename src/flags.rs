@@ -69,9 +69,9 @@ flag_kinds! {
     BEAM_FILLS_MAP = "beam-fills-map", Caution, "map",
         "The beam ({major_px} px) is wider than a third of the map ({size_px} px): noise and sizes cannot be told apart; check beam and pixel scale.";
     SATURATED = "saturated-pixels", Caution, "map",
-        "{count} pixels are at the saturation value: peaks and fluxes are lower limits in truth.";
+        "{percent} % of the pixels ({count}) are at the highest value the map can hold: peaks are lower limits and fluxes too small. Where that is much of the map, it is an inverted picture or has a border: invert or crop it.";
     CLIPPED_FLOOR = "clipped-floor", Caution, "noise",
-        "{fraction} of the pixels sit at the map's lowest value: the map was clipped before it came here, noise and faint emission are rough.";
+        "{percent} % of the pixels sit at the map's lowest value: the map was clipped before it came here. Noise, faint emission and everything near the noise are rough; no side is called the jet.";
     QUANTISED = "quantised", Caution, "noise",
         "The brightness steps ({step_over_rms} rms) are coarser than the noise: faint emission and errors are limited by the image format.";
     NOISE_GIVEN = "noise-given", Note, "noise",
@@ -83,9 +83,13 @@ flag_kinds! {
     CORRELATION_UNLIKE_BEAM = "correlation-unlike-beam", Note, "noise",
         "The noise is correlated over {correlation_px} px where the beam has {beam_px} px: errors follow the measured correlation, but check the beam.";
     PARTNERS_JOINED = "regions-joined", Note, "source",
-        "{count} separate regions were taken as one source (expected chance groups: {chance}); see the figure if that matters.";
+        "{count} separate regions were taken as one source (expected chance groups: {chance}); check the map if that matters.";
     PARTNERS_UNSURE = "regions-joined-unsure", Caution, "source",
         "The source is made of separate regions that chance could have brought together (expected chance groups: {chance}); check against other maps, or give the host.";
+    HOST_UNPLACED = "host-unplaced", Caution, "source",
+        "host_ra_deg and host_dec_deg cannot be placed on the map: centre_ra_deg, centre_dec_deg and the pixel scale are needed for that.";
+    NOTHING_AT_HOST = "nothing-at-host", Note, "source",
+        "Regions above the noise were found, none near enough to the host to be its source; the nearest begins {distance_px} px away.";
     HOST_UNKNOWN = "host-unknown", Note, "source",
         "No host position is given: the source nearest the map's middle was taken; give host_ra_deg and host_dec_deg where known.";
     CORE_UNSURE = "core-unsure", Caution, "source",
@@ -107,9 +111,13 @@ flag_kinds! {
     JET_SIDE_GIVEN = "jet-side-given", Note, "brightness",
         "The jet side was given by the observer and used as it is: the ratio may be below 1.";
     STRIP_BLANKS = "strip-blanks", Caution, "brightness",
-        "{fraction} of the strip is blank; both strips leave out the same pixels.";
+        "{percent} % of the strip is blank or off the map; both strips leave out the same places.";
     STRIP_NEAR_BRIGHT = "strip-near-bright", Note, "brightness",
         "Residuals at the strip's distances exceed the map's rms by {factor}; the larger value is used in the errors.";
+    INVERTED_INDEX = "spectral-index-rising", Caution, "physics",
+        "spectral_index is {value}: here S falls as frequency to the power -spectral_index, so this is a spectrum that rises with frequency. Where S is written as frequency^+index, turn the sign.";
+    ODD_FREQUENCY = "frequency-odd", Caution, "physics",
+        "frequency_ghz is {value}; check whether it was meant in Hz or MHz.";
     SYMMETRY_ASSUMED = "symmetry-assumed", Note, "physics",
         "The beaming formulas take the two jets as intrinsically equal and steady; projection and environment are not known from one map. Hot spots and lobes say little about the flow.";
     SPECTRAL_INDEX_ASSUMED = "spectral-index-assumed", Note, "physics",

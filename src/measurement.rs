@@ -26,6 +26,8 @@ pub enum Because {
     NoSource,
     /// No core could be chosen, so nothing can be measured from it.
     NoCore,
+    /// The core is too unsure for a number that hangs on it.
+    CoreUnsure,
     /// The source is not resolved by the beam.
     Unresolved,
     /// No emission of this side stands above the noise.
@@ -153,6 +155,14 @@ impl Measurement {
         match self {
             Self::Value { minus, plus, .. } => Some(0.5 * (minus + plus)),
             _ => None,
+        }
+    }
+
+    /// A value as a lower limit: what is known from below only (saturated, cut off).
+    pub fn as_lower_limit(self, confidence: f64) -> Self {
+        match self {
+            Self::Value { value, .. } => Self::lower_limit(value, confidence),
+            other => other,
         }
     }
 

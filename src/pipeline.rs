@@ -82,6 +82,9 @@ pub fn measure(
         model_source(&input)
     });
     let (Some(chosen), Some(model)) = (chosen, model) else {
+        if let Some(distance_px) = nearest_region_px(&observed.regions, anchor) {
+            flags.push(Flag::new(flags::NOTHING_AT_HOST, &[("distance_px", distance_px)]));
+        }
         return Ok(assemble_without_source(map, name, settings, &observed, flags));
     };
     flag_source(map, anchor, &chosen, &model, &mut flags);
@@ -157,6 +160,20 @@ fn observe(
     );
     flag_observed(map, &noise, &correlation, beam, working_beam, flags);
     Ok(Observed { noise, correlation, beam, working_beam, regions })
+}
+
+/// Distance of the nearest region's nearest pixel from a known host.
+fn nearest_region_px(regions: &[Region], anchor: Anchor) -> Option<f64> {
+    let pixel = anchor.pixel;
+    regions
+        .iter()
+        .filter(|_| anchor.is_known)
+        .flat_map(|region| &region.runs)
+        .map(|run| {
+            let x = pixel.x.clamp(run.x0 as f64, run.x1 as f64);
+            pixel.distance_px(Pixel::new(x, run.y as f64))
+        })
+        .min_by(f64::total_cmp)
 }
 
 /// The beam read off the noise's autocorrelation, turned from the array onto the sky.
@@ -276,7 +293,7 @@ fn measure_sides(
     let pair = pair.inflated(inflation);
     let blank = pair.fluxes.iter().map(|f| f.blank_fraction).fold(0.0, f64::max);
     if blank > 0.01 {
-        flags.push(Flag::new(flags::STRIP_BLANKS, &[("fraction", blank)]));
+        flags.push(Flag::new(flags::STRIP_BLANKS, &[("percent", 100.0 * blank)]));
     }
     let pieces = (((strip.outer - strip.inner) / observed.working_beam.major).floor() as usize)
         .clamp(1, 200);
@@ -328,10 +345,12 @@ fn flag_observed(
         ));
     }
     if map.saturated > 0 {
-        flags.push(Flag::new(flags::SATURATED, &[("count", map.saturated as f64)]));
+        let percent = 100.0 * map.saturated as f64 / (map.rows * map.columns) as f64;
+        let count = map.saturated as f64;
+        flags.push(Flag::new(flags::SATURATED, &[("count", count), ("percent", percent)]));
     }
     if let Some(fraction) = map.clipped_fraction() {
-        flags.push(Flag::new(flags::CLIPPED_FLOOR, &[("fraction", fraction)]));
+        flags.push(Flag::new(flags::CLIPPED_FLOOR, &[("percent", 100.0 * fraction)]));
     }
     if map.given_rms().is_some() {
         flags.push(Flag::new(flags::NOISE_GIVEN, &[]));
@@ -355,7 +374,9 @@ fn flag_source(
     model: &SourceModel,
     flags: &mut Vec<Flag>,
 ) {
-    if !anchor.is_known {
+    if map.host_is_unplaced() {
+        flags.push(Flag::new(flags::HOST_UNPLACED, &[]));
+    } else if !anchor.is_known {
         flags.push(Flag::new(flags::HOST_UNKNOWN, &[]));
     }
     if chosen.members.len() > 1 && chosen.chance > 0.0 {

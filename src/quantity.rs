@@ -186,8 +186,8 @@ pub const QUANTITIES: &[Quantity] = &[
         "mJy/beam",
         "",
         Brightness,
-        "Highest brightness of the source.",
-        "largest pixel, background removed",
+        "Highest brightness of the source, between pixels too: it may exceed the largest pixel.",
+        "top of a paraboloid through the highest pixel and its eight neighbours, background removed",
         PRACTICE,
     ),
     quantity(

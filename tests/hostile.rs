@@ -610,23 +610,27 @@ fn odd_descriptions_on_the_command_line() {
             "--host-x-px 3",
             Failed("incomplete-keys", &["host_x_px is given without host_y_px"]),
         ),
-        only("host outside the map", "--host-x-px 5000 --host-y-px -3000", Record(ANY, &[])),
+        only(
+            "host outside the map",
+            "--host-x-px 5000 --host-y-px -3000",
+            Failed("bad-description-value", &["host_x_px is at column 5000", "on the map"]),
+        ),
         only(
             "host at the end of the number line",
             "--host-x-px 1e308 --host-y-px 1e308",
-            Record(ANY, &[]),
+            Failed("bad-description-value", &["host_x_px", "on the map"]),
         ),
         only(
             "host on the far side of the sky",
             &format!(
                 "{scale} --centre-ra-deg 0 --centre-dec-deg 0 --host-ra-deg 180 --host-dec-deg 0"
             ),
-            Record(ANY, &[]),
+            Failed("bad-description-value", &["host_ra_deg", "far side of the sky"]),
         ),
         only(
             "host by sky, map without coordinates",
             "--host-ra-deg 10 --host-dec-deg 10",
-            Record(ANY, &[]),
+            Record(ANY, &["host-unplaced"]),
         ),
         only(
             "core outside the map",

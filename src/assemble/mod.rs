@@ -13,7 +13,7 @@ use std::collections::BTreeMap;
 
 use self::parts::{component_records, component_separation, core_axes_mas};
 use self::roles::order_sides;
-use self::shape::{arms, fr_ratios, measure_extents};
+use self::shape::{Arms, arms, fr_ratios, measure_extents};
 use self::side::side_record;
 use self::strips::brightness_record;
 use self::sums::{brightest_region, core_sum, lobe_flux_ratio, sum_parts};
@@ -70,6 +70,18 @@ pub struct Findings<'a> {
     pub strips: Option<Strips>,
     /// The fitted components.
     pub components: FitReport,
+}
+
+/// Below this confidence of the core no ratio is given and no side is called the jet.
+const LEAST_CORE_CONFIDENCE: f64 = 0.5;
+/// With a larger share of the strips blank or off the map no ratio is given.
+const MOST_BLANK: f64 = 0.5;
+
+impl Findings<'_> {
+    /// Whether too little speaks for the chosen core to hang a ratio on it.
+    fn core_is_unsure(&self) -> bool {
+        self.model.core.confidence < LEAST_CORE_CONFIDENCE
+    }
 }
 
 /// Offset of a side's end: its hot spot, else its ridge's last point.
@@ -176,9 +188,17 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     let extents = measure_extents(findings);
     let size = extents.size;
     let deconvolved = units.deconvolved(extents.deconvolved);
-    let sides = order.index.map(|k| side_record(findings, &units, &sums, k, order.role_of(k)));
-    let [first_side, second_side] = sides;
-    let arms = arms(findings, order.index);
+    // A point has no sides, arms or extended rest.
+    let unresolved = matches!(deconvolved, Measurement::UpperLimit { .. });
+    let [first_side, second_side] = order.index.map(|k| {
+        if unresolved {
+            SideRecord::missing(order.role_of(k), Because::Unresolved)
+        } else {
+            side_record(findings, &units, &sums, k, order.role_of(k))
+        }
+    });
+    let arms =
+        if unresolved { Arms::missing(Because::Unresolved) } else { arms(findings, order.index) };
     let fr = fr_ratios(findings, order.index, size, deconvolved);
     let beams = deconvolved.best().map(|d| d / beam.major);
     let brightness = brightness_record(findings, &units, &order);
@@ -190,7 +210,7 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
             largest_angular_size_arcsec: las_arcsec,
             total_flux_density_mjy: total,
             core_flux_density_mjy: core_flux,
-            core_axes_mas: core_axes_mas(&components, core_px.is_some()),
+            core_axes_mas: core_axes_mas(findings, &units, &components),
             side_length_arcsec: [first_side.length_arcsec, second_side.length_arcsec],
             ..physics_input(map, settings)
         },
@@ -213,19 +233,23 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     let peak = if peak.0 > 0.0 { peak } else { brightest_region(findings) };
     let rms = if peak.1 > 0.0 { peak.0 / peak.1 } else { 0.0 };
     let near = findings.strips.as_ref().and_then(|s| s.near_rms);
-    let status = if matches!(deconvolved, Measurement::UpperLimit { .. }) {
-        Status::Unresolved
-    } else {
-        Status::Measured
-    };
+    let status = if unresolved { Status::Unresolved } else { Status::Measured };
     // In the map's own unit: a ratio needs no flux scale, and its error cancels.
     let total_sum = Measurement::symmetric(sums.total.value, sums.total.sigma);
-    let prominence = physics::emission::core_prominence(core_sum, total_sum);
+    let prominence = if unresolved {
+        Measurement::missing(Because::Unresolved)
+    } else {
+        physics::emission::core_prominence(core_sum, total_sum)
+    };
     let source = SourceRecord {
         position: source_position(map, model),
         total_flux_density_mjy: total,
         contour_flux_density_mjy: units.flux(sums.contour.value, sums.contour.sigma),
-        peak_brightness_mjy_per_beam: units.brightness(peak.0, rms),
+        peak_brightness_mjy_per_beam: if map.saturated > 0 {
+            units.brightness(peak.0, rms).as_lower_limit(settings.confidence)
+        } else {
+            units.brightness(peak.0, rms)
+        },
         peak_signal_to_noise: Bare::number(peak.1, Because::NoNoiseEstimate),
         contour_mjy_per_beam: units.bare_brightness(model.level),
         largest_angular_size_arcsec: las_arcsec,
@@ -324,7 +348,15 @@ fn physics_input(map: &SkyMap, settings: &Settings) -> PhysicsInput {
 
 fn assumed_values(map: &SkyMap, flags: &mut Vec<Flag>) {
     let d = &map.description;
-    if d.spectral_index.is_none() {
+    let uses_index =
+        d.redshift.is_some() || flags.iter().any(|f| f.code == flags::SYMMETRY_ASSUMED.code);
+    if let Some(value) = d.spectral_index.filter(|index| *index < -0.3) {
+        flags.push(Flag::new(flags::INVERTED_INDEX, &[("value", value)]));
+    }
+    if let Some(value) = d.frequency_ghz.filter(|ghz| !(0.001..=3000.0).contains(ghz)) {
+        flags.push(Flag::new(flags::ODD_FREQUENCY, &[("value", value)]));
+    }
+    if d.spectral_index.is_none() && uses_index {
         flags.push(Flag::new(flags::SPECTRAL_INDEX_ASSUMED, &[]));
     }
     if d.distance_mpc.is_some() && d.redshift.is_some() {

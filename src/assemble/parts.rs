@@ -3,6 +3,7 @@
 use super::units::Units;
 use super::{Findings, position};
 use crate::components::{Component, outermost_separation};
+use crate::extent::resolution_limit;
 use crate::measurement::{Because, Measurement};
 use crate::record::{ComponentRecord, ComponentRole, ShapeRecord};
 use crate::units::Pixel;
@@ -66,14 +67,30 @@ pub(super) fn component_records(findings: &Findings, units: &Units) -> Vec<Compo
         .collect()
 }
 
-/// Deconvolved axes of the component with role core, in mas; too few features where there
-/// is a core but the fit tells no component of its own there.
+/// Deconvolved axes of the core in mas: those of the component with role core; where the fit
+/// tells none there but a beam-shaped component was found, it is a point, and the smallest
+/// size that could be told from one stands in as upper limit.
 pub(super) fn core_axes_mas(
+    findings: &Findings,
+    units: &Units,
     components: &[ComponentRecord],
-    has_core: bool,
 ) -> Option<[Measurement; 2]> {
-    let core = components.iter().find(|c| c.role == ComponentRole::Core);
-    let axes = core.map(|c| [c.deconvolved.major_arcsec, c.deconvolved.minor_arcsec]);
-    let unseparated = [Measurement::missing(Because::TooFewFeatures); 2];
-    axes.map(|axes| axes.map(|axis| axis.scaled(1000.0))).or(has_core.then_some(unseparated))
+    let component = components.iter().find(|c| c.role == ComponentRole::Core);
+    let axes = match (component, findings.model.core.fit) {
+        (Some(c), _) => [c.deconvolved.major_arcsec, c.deconvolved.minor_arcsec],
+        (None, Some(fit)) => {
+            let beam = &findings.observed.working_beam;
+            let signal = fit.peak / fit.peak_sigma.max(f64::MIN_POSITIVE);
+            [beam.major, beam.minor].map(|fwhm| {
+                let limit = resolution_limit(fwhm, signal);
+                let limit = Measurement::upper_limit(limit, findings.settings.confidence);
+                units.deconvolved(units.arcsec(limit))
+            })
+        }
+        (None, None) if findings.model.core.pixel.is_some() => {
+            [Measurement::missing(Because::TooFewFeatures); 2]
+        }
+        (None, None) => return None,
+    };
+    Some(axes.map(|axis| axis.scaled(1000.0)))
 }

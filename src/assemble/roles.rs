@@ -1,6 +1,6 @@
 //! Which side comes first in the record, and what the sides are called.
 
-use super::{Findings, end_offset};
+use super::{Findings, MOST_BLANK, end_offset};
 use crate::flags::{self, Flag};
 use crate::record::Role;
 use crate::units::{SkyOffset, wrap_difference_deg};
@@ -51,8 +51,12 @@ pub(super) fn order_sides(findings: &Findings, flags: &mut Vec<Flag>) -> Order {
         let turn = |k: usize| wrap_difference_deg(ridges[k].start_deg - given).abs();
         return jet_first(usize::from(turn(1) < turn(0)), sidedness);
     }
+    // Roles need a core to stand on, strips that are there, and the faint half of the noise.
+    let trusted = !findings.core_is_unsure()
+        && map.clipped_floor.is_none()
+        && strips.is_some_and(|s| s.blank_fraction <= MOST_BLANK);
     match difference {
-        Some(d) if d.abs() >= findings.settings.sidedness_sigma => {
+        Some(d) if trusted && d.abs() >= findings.settings.sidedness_sigma => {
             jet_first(usize::from(d < 0.0), sidedness)
         }
         Some(d) => {

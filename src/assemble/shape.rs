@@ -68,6 +68,24 @@ pub(super) struct Arms {
     pub(super) bend_deg: Measurement,
 }
 
+impl Arms {
+    /// No arms, for one reason.
+    pub(super) fn missing(because: Because) -> Self {
+        let none = Measurement::missing(because);
+        Self {
+            position_angle_deg: none,
+            hotspot_separation: none,
+            folded: none,
+            unfolded: none,
+            basis: ArmBasis::None,
+            longer: None,
+            because,
+            misalignment_deg: none,
+            bend_deg: none,
+        }
+    }
+}
+
 /// 1σ of a side's end along each axis: a hot spot's fit error, or a quarter beam for a ridge
 /// that fades.
 pub(super) fn end_sigma(findings: &Findings, k: usize) -> f64 {
@@ -77,23 +95,14 @@ pub(super) fn end_sigma(findings: &Findings, k: usize) -> f64 {
 }
 
 pub(super) fn arms(findings: &Findings, order: [usize; 2]) -> Arms {
-    let none = |because| Arms {
-        position_angle_deg: Measurement::missing(because),
-        hotspot_separation: Measurement::missing(because),
-        folded: Measurement::missing(because),
-        unfolded: Measurement::missing(because),
-        basis: ArmBasis::None,
-        longer: None,
-        because,
-        misalignment_deg: Measurement::missing(because),
-        bend_deg: Measurement::missing(because),
+    let Some((ridges, features)) = &findings.model.sides else {
+        return Arms::missing(Because::NoCore);
     };
-    let Some((ridges, features)) = &findings.model.sides else { return none(Because::NoCore) };
     let ends = order.map(|k| end_offset(&ridges[k], &features[k]));
     let sigma = order.map(|k| end_sigma(findings, k));
     let core_sigma = findings.model.core.position_sigma;
     let (Some(a), Some(b)) = (ends[0], ends[1]) else {
-        let mut one = none(Because::SideNotDetected);
+        let mut one = Arms::missing(Because::SideNotDetected);
         // One side still has a direction.
         if let Some((k, end)) = ends.iter().enumerate().find_map(|(k, e)| e.map(|e| (k, e))) {
             let error = (sigma[k].hypot(core_sigma) / end.radius()).to_degrees();
@@ -181,7 +190,10 @@ pub(super) fn fr_ratios(
     let over = |size: Measurement| match size {
         Measurement::Value { value, minus, .. } if value > 0.0 => {
             let ratio = distance / value;
-            if monotonic {
+            if monotonic && ratio >= 1.0 {
+                // The brightest points of a source lie inside it: no limit at all.
+                Measurement::missing(Because::Unresolved)
+            } else if monotonic {
                 Measurement::upper_limit(ratio, confidence)
             } else {
                 let error = ratio * (sigma[0].hypot(sigma[1]) / distance).hypot(minus / value);

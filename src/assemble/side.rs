@@ -236,7 +236,8 @@ pub(super) fn lobe_record(
     };
     let edge = strips.placed.strip.outer + findings.observed.working_beam.major;
     let lobe = lobes[index];
-    if lobe.area_px < 1.0 {
+    let seen = lobe.value >= findings.settings.ratio_value_sigma * lobe.sigma;
+    if lobe.area_px < 1.0 || !seen || size.best().is_some_and(|length| length <= edge) {
         return OrMissing::missing(Because::NoLobe);
     }
     let beam = findings.observed.working_beam.mean_fwhm();

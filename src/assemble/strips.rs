@@ -2,7 +2,7 @@
 
 use super::roles::Order;
 use super::units::Units;
-use super::{Findings, Strips};
+use super::{Findings, MOST_BLANK, Strips};
 use crate::brightness::{FluxPair, StripPair, ratio};
 use crate::measurement::{Bare, Because, Measurement, OrMissing};
 use crate::record::{ApertureRecord, BrightnessRecord, ProfilePointRecord};
@@ -38,7 +38,10 @@ pub(super) fn brightness_record(
         covariance: pair.covariance,
     };
     let ratio_of = |pair: &StripPair| {
-        if strips.blank_fraction > 0.5 {
+        if findings.core_is_unsure() {
+            return Measurement::missing(Because::CoreUnsure);
+        }
+        if strips.blank_fraction > MOST_BLANK {
             return Measurement::missing(Because::BlankPixels);
         }
         ratio(flux_pair(pair), settings.ratio_value_sigma, settings.confidence)

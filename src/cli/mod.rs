@@ -100,7 +100,9 @@ enum CliError {
         "no map named and no --manifest; name at least one map file, such as `jetspan measure MAP`"
     )]
     NoMap,
-    #[error("no quantity is called `{found}`{near}; `jetspan explain` lists all")]
+    #[error(
+        "no quantity, flag or description key is called `{found}`{near}; `jetspan explain` lists the quantities"
+    )]
     UnknownQuantity { found: String, near: String },
 }
 

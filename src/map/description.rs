@@ -582,10 +582,17 @@ fn checked(spec: &KeySpec, value: Value, place: &str) -> Result<Value, Descripti
         },
         ValueKind::Choice(words) => {
             let found = value.as_str().map(|word| word.trim().replace(['µ', 'μ'], "u"));
-            if let Some(word) = words.iter().find(|&&word| found.as_deref() == Some(word)) {
+            // Any case but that of a leading m: mJy and MJy differ by a factor of 10⁹.
+            let is = |word: &str, found: &str| {
+                word == found
+                    || (!found.starts_with('M') && word.to_lowercase() == found.to_lowercase())
+            };
+            let matching = found.as_deref().and_then(|f| words.iter().find(|word| is(word, f)));
+            if let Some(word) = matching {
                 return Ok(Value::from(*word));
             }
-            let near = found.and_then(|found| nearest(&found, words.iter().copied()));
+            let short = found.map(|f| f.replace("Jansky", "Jy").replace("jansky", "Jy"));
+            let near = short.and_then(|found| nearest(&found, words.iter().copied()));
             let hint = near.map_or(String::new(), |word| format!(" (the nearest is {word})"));
             Err(bad_value(spec, value, format!("one of {}{hint}", words.join(", ")), place))
         }

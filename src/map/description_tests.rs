@@ -107,7 +107,7 @@ fn values_out_of_range_are_refused_with_what_is_needed() {
         (r#"{"spectral_index_error": -1}"#, "bad-description-value", "not below 0"),
         (r#"{"flux_scale_error": 5}"#, "bad-description-value", "from 0 to 1"),
         (r#"{"value_scale": 0}"#, "bad-description-value", "other than 0"),
-        (r#"{"unit": "JY/BEAM"}"#, "bad-description-value", "nearest is Jy/beam"),
+        (r#"{"unit": "Jansky/beam"}"#, "bad-description-value", "nearest is Jy/beam"),
         (r#"{"rows": "up"}"#, "bad-description-value", "bottom-up, top-down"),
         (r#"{"plane": -1}"#, "bad-description-value", "whole number"),
         (r#"{"epoch": "yesterday"}"#, "bad-description-value", "ISO date"),

@@ -295,7 +295,7 @@ mod tests {
             ("{\"redshift\":1}\n", "description-syntax", "key file"),
             ("{\"file\":\"a\"}\n{\"file\":\"b\",}\n", "description-syntax", "line 2"),
             (
-                "{\"file\":\"a\",\"unit\":\"Jy/Beam\"}\n",
+                "{\"file\":\"a\",\"unit\":\"Jy/beem\"}\n",
                 "bad-description-value",
                 "nearest is Jy/beam",
             ),

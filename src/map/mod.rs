@@ -119,6 +119,7 @@ impl SkyMap {
         check_core(&description, &geometry)?;
         let beam = geometry.has_scale().then(|| described_beam(&description)).flatten();
         check_beam(beam, &geometry)?;
+        check_host(&description, &geometry)?;
 
         let input = InputFacts::of(&stored);
         let is_single = matches!(stored.samples, Samples::F32(_));
@@ -279,12 +280,13 @@ impl SkyMap {
     /// Pixel position of the host galaxy, where the description gives one that the map's
     /// geometry can place; it may lie outside the array.
     pub fn host_pixel(&self) -> Option<Pixel> {
-        let description = &self.description;
-        if let (Some(x), Some(y)) = (description.host_x_px, description.host_y_px) {
-            return Some(Pixel { x, y });
-        }
-        let (ra_deg, dec_deg) = (description.host_ra_deg?, description.host_dec_deg?);
-        self.geometry.pixel_of_sky(SkyPosition { ra_deg, dec_deg })
+        described_host(&self.description, &self.geometry)
+    }
+
+    /// Whether a host is given by sky coordinates that cannot be placed: the map's centre or
+    /// pixel scale is not known.
+    pub fn host_is_unplaced(&self) -> bool {
+        self.description.host_ra_deg.is_some() && !self.geometry.has_sky()
     }
 
     /// Pixel position of the core as chosen by the observer.
@@ -315,6 +317,41 @@ fn check_core(
         }
     }
     Ok(())
+}
+
+/// The host's place on the map, where it is given and can be placed.
+fn described_host(description: &MapDescription, geometry: &SkyGeometry) -> Option<Pixel> {
+    if let (Some(x), Some(y)) = (description.host_x_px, description.host_y_px) {
+        return Some(Pixel { x, y });
+    }
+    let (ra_deg, dec_deg) = (description.host_ra_deg?, description.host_dec_deg?);
+    geometry.pixel_of_sky(SkyPosition { ra_deg, dec_deg })
+}
+
+/// A host outside the array: it or the centre is wrong, and nothing could be found at it.
+fn check_host(
+    description: &MapDescription,
+    geometry: &SkyGeometry,
+) -> Result<(), DescriptionError> {
+    let given = description.host_x_px.is_some() || description.host_ra_deg.is_some();
+    let by_sky_without_sky = description.host_ra_deg.is_some() && !geometry.has_sky();
+    let host = described_host(description, geometry);
+    if !given || by_sky_without_sky || host.is_some_and(|host| geometry.contains(host)) {
+        return Ok(());
+    }
+    let found = host.map_or("on the far side of the sky".to_owned(), |host| {
+        format!("at column {:.1}, row {:.1}", host.x, host.y)
+    });
+    Err(DescriptionError::BadValue {
+        place: "map description".to_owned(),
+        key: if description.host_x_px.is_some() { "host_x_px" } else { "host_ra_deg" },
+        found,
+        needed: format!(
+            "on the map, columns 0 to {} and rows 0 to {}: mend the host or the map's centre",
+            geometry.columns().saturating_sub(1),
+            geometry.rows().saturating_sub(1)
+        ),
+    })
 }
 
 /// A beam longer than the whole map: one of the two is not in arcsec.

@@ -272,6 +272,9 @@ fn core_brightness_temperature_k(input: &PhysicsInput, place: &Place) -> Measure
     if flux.is_missing() {
         return flux;
     }
+    let Some(frequency_ghz) = input.frequency_ghz else {
+        return missing(Because::NoFrequency);
+    };
     let Some(axes) = input.core_axes_mas else {
         return missing(Because::NoCore);
     };
@@ -281,9 +284,6 @@ fn core_brightness_temperature_k(input: &PhysicsInput, place: &Place) -> Measure
             return axis;
         }
     }
-    let Some(frequency_ghz) = input.frequency_ghz else {
-        return missing(Because::NoFrequency);
-    };
     let (Some(major), Some(minor)) = (Factor::new(major), Factor::new(minor)) else {
         return missing(Because::OutOfDomain);
     };

@@ -149,8 +149,13 @@ fn core_at_host(
     let rivals: Vec<(Peak, f64)> = peaks
         .iter()
         .filter(|p| distance(p.pixel) > reach && distance(p.pixel) <= 2.0 * beam.major)
-        .map(|p| (*p, 0.3 * (reach / distance(p.pixel)).min(1.0)))
+        .map(|p| (*p, reach / distance(p.pixel)))
         .collect();
+    // Rivals share what the choice leaves.
+    let shared = |confidence: f64| -> Vec<(Peak, f64)> {
+        let total: f64 = rivals.iter().map(|(_, weight)| weight).sum();
+        rivals.iter().map(|(p, weight)| (*p, (1.0 - confidence) * weight / total)).collect()
+    };
     if let Some(peak) = near
         && let Some(fit) = fit_at(peak.pixel, true)
         && fit.peak > CORE_DETECTION_SIGMA * fit.peak_sigma
@@ -161,7 +166,7 @@ fn core_at_host(
             position_sigma: fit.position_sigma,
             basis: CoreBasis::Host,
             confidence: 0.95,
-            rivals,
+            rivals: shared(0.95),
             fit: Some(fit),
             peak_upper: None,
         };
@@ -169,7 +174,7 @@ fn core_at_host(
     let mut core = at_position(host, CoreBasis::Host, fit_at(host, false), window, z_confidence);
     core.position_sigma = 0.25 * beam.major;
     core.confidence = if rivals.is_empty() { 0.9 } else { 0.7 };
-    core.rivals = rivals;
+    core.rivals = shared(core.confidence);
     core
 }
 

@@ -27,7 +27,7 @@ pub fn full(record: &Record) -> String {
 /// Head of the lines of [`summary_row`].
 pub fn summary_head() -> String {
     format!(
-        "{:<18} {:<12} {:>18} {:>14} {:>20} {:<10} {}\n",
+        "{:<18} {:<12} {:>18} {:>14} {:>18} {:<10} {}\n",
         "map", "status", "largest size", "axis PA / deg", "R", "FR class", "cautions"
     )
 }
@@ -46,8 +46,12 @@ pub fn summary_row(record: &Record) -> String {
                 .filter(|f| f.severity == Severity::Caution)
                 .map(|f| f.code.as_str())
                 .collect();
-            format!(
-                "{:<18} {:<12} {:>18} {:>14} {:>20} {:<10} {}\n",
+            let class = match record.status {
+                Status::NoDetection => NO_NUMBER,
+                _ => class(record.source.fr_class.class),
+            };
+            let line = format!(
+                "{:<18} {:<12} {:>18} {:>14} {:>18} {:<10} {}",
                 record.id,
                 status(record.status),
                 size(
@@ -58,9 +62,10 @@ pub fn summary_row(record: &Record) -> String {
                 ),
                 measurement(record.source.position_angle_deg),
                 measurement(record.brightness.jet_to_counter_jet_ratio),
-                class(record.source.fr_class.class),
+                class,
                 cautions.join(" "),
-            )
+            );
+            format!("{}\n", line.trim_end())
         }
     }
 }
@@ -191,9 +196,9 @@ fn noise(page: &mut Page, record: &MapRecord) {
         OrMissing::Present(v) => format!("{}/beam", flux_density_bare(v)),
         OrMissing::Missing { missing } => format!("{NO_NUMBER} ({})", reason(missing)),
     };
-    page.row("rms at the source", &rms);
+    page.row("rms at the core", &rms);
     if record.status != Status::NoDetection {
-        page.row("peak over rms", &bare(&noise.dynamic_range, 3, ""));
+        page.row("dynamic range", &bare(&noise.dynamic_range, 3, ""));
     }
     page.row("correlated over", &bare(&noise.correlation_fwhm_px, 3, "px"));
 }
@@ -235,7 +240,7 @@ fn source(page: &mut Page, record: &MapRecord, unit: AngularUnit) {
 
     page.head("source");
     page.row("total flux density", &shown_flux(s.total_flux_density_mjy));
-    page.row("peak over rms", &bare(&s.peak_signal_to_noise, 3, ""));
+    page.row("peak over local rms", &bare(&s.peak_signal_to_noise, 3, ""));
     page.row("largest size", &size(record, s.largest_angular_size_arcsec, s.largest_size_px, unit));
     page.row("  beam taken off", &shown_angle(s.largest_angular_size_deconvolved_arcsec, unit));
     page.row("hot-spot separation", &shown_angle(s.hotspot_separation_arcsec, unit));
@@ -260,7 +265,7 @@ fn source(page: &mut Page, record: &MapRecord, unit: AngularUnit) {
         .get(&FrClassName::II)
         .map_or(String::new(), |p| format!("  (P(II) = {p:.2} from the ratio's error alone)"));
     page.row("FR class", &format!("{}{probability}", class(s.fr_class.class)));
-    page.row("core prominence", &shown(s.core_prominence, ""));
+    page.row("core prominence", &format!("{}  (core over the rest)", shown(s.core_prominence, "")));
 }
 
 fn sides(page: &mut Page, record: &MapRecord, unit: AngularUnit) {
@@ -270,8 +275,8 @@ fn sides(page: &mut Page, record: &MapRecord, unit: AngularUnit) {
     let mut both = |name: &str, value: &dyn Fn(&SideRecord) -> String| {
         page.pair(name, [value(&sides[0]), value(&sides[1])]);
     };
-    both("end position angle", &|s| with_unit(s.end_position_angle_deg, "°"));
-    both("inner position angle", &|s| with_unit(s.inner_position_angle_deg, "°"));
+    both("position angle, end", &|s| with_unit(s.end_position_angle_deg, "°"));
+    both("  two beams out", &|s| with_unit(s.inner_position_angle_deg, "°"));
     both("length", &|s| size(record, s.length_arcsec, s.length_px, unit));
     if sides.iter().any(|s| !s.length_kpc.is_missing()) {
         both("  projected", &|s| with_unit(s.length_kpc, "kpc"));
@@ -283,7 +288,11 @@ fn sides(page: &mut Page, record: &MapRecord, unit: AngularUnit) {
     both("lobe flux density", &|s| {
         s.lobe.present().map_or(NO_NUMBER.to_owned(), |l| flux_density(l.flux_density_mjy))
     });
-    both("jet seen in the strip", &|s| if s.jet.detected { "yes" } else { "no" }.to_owned());
+    both("jet seen in the strip", &|s| {
+        let answer = if s.jet.detected { "yes" } else { "no" };
+        if s.jet.flux_density_mjy.is_missing() && !s.jet.detected { NO_NUMBER } else { answer }
+            .to_owned()
+    });
 }
 
 fn brightness(page: &mut Page, record: &MapRecord, unit: AngularUnit) {
@@ -310,7 +319,7 @@ fn brightness(page: &mut Page, record: &MapRecord, unit: AngularUnit) {
         page.row(
             "strip fluxes",
             &format!(
-                "{} and {}",
+                "{} and {}  (noise only)",
                 flux_density(b.jet_flux_density_mjy),
                 flux_density(b.counter_jet_flux_density_mjy)
             ),
@@ -321,15 +330,15 @@ fn brightness(page: &mut Page, record: &MapRecord, unit: AngularUnit) {
                 (OrMissing::Present(i), OrMissing::Present(o), OrMissing::Present(w)) => {
                     let f = unit.per_arcsec();
                     format!(
-                        "from {} to {} {}, half width {}",
+                        "from {} to {}, half width {} {}",
                         significant(i * f, 3),
                         significant(o * f, 3),
-                        unit.symbol(),
-                        significant(w * f, 2)
+                        significant(w * f, 2),
+                        unit.symbol()
                     )
                 }
                 _ => format!(
-                    "from {} to {} px, half width {}",
+                    "from {} to {}, half width {} px",
                     significant(aperture.inner_px, 3),
                     significant(aperture.outer_px, 3),
                     significant(aperture.half_width_px, 2)
@@ -350,15 +359,26 @@ fn physics(page: &mut Page, record: &MapRecord) {
             "speed × cos(angle) / c",
             &format!("{}  (exponent {})", measurement(b.beta_cos_theta), bare(&b.exponent, 3, "")),
         );
-        page.row(
-            "angle to line of sight",
-            &format!("at most {}", with_unit(b.viewing_angle_max_deg, "°")),
-        );
-        page.row("speed / c", &format!("at least {}", measurement(b.beta_min)));
-        page.row("Lorentz factor", &format!("at least {}", measurement(b.lorentz_factor_min)));
+        page.row("angle to line of sight", &bound("at most", b.viewing_angle_max_deg, "°"));
+        page.row("speed / c", &bound("at least", b.beta_min, ""));
+        page.row("Lorentz factor", &bound("at least", b.lorentz_factor_min, ""));
     }
     page.row("projected length", &shown(p.projected_length_kpc, "kpc"));
     page.row("luminosity", &shown(p.luminosity_w_per_hz, "W/Hz"));
+}
+
+/// A bound that follows from a value (`at least 0.21 ± 0.01`) or from a limit
+/// (`at least 0.52 (95 %)`).
+fn bound(words: &str, value: Measurement, unit: &str) -> String {
+    let text = with_unit(value, unit);
+    match value {
+        Measurement::LowerLimit { confidence, .. } | Measurement::UpperLimit { confidence, .. } => {
+            let number = text.trim_start_matches(['>', '<', ' ']);
+            format!("{words} {number} ({:.0} %)", 100.0 * confidence)
+        }
+        Measurement::Value { .. } => format!("{words} {text}"),
+        Measurement::Missing { .. } => measurement_or_reason(value),
+    }
 }
 
 fn flags(page: &mut Page, record: &MapRecord) {

@@ -237,7 +237,24 @@ fn explain_finds_paths_indices_and_endings() {
 fn every_quantity_is_explained_by_its_own_path() {
     for quantity in jetspan::quantity::QUANTITIES {
         let text = Run::new(["explain", quantity.path]).run().stdout;
-        assert!(text.starts_with(quantity.path) && text.contains(quantity.meaning), "{text}");
+        // The text is wrapped: words count, not the breaks between them.
+        let words = |text: &str| text.split_whitespace().collect::<Vec<_>>().join(" ");
+        assert!(text.starts_with(quantity.path), "{text}");
+        assert!(words(&text).contains(&words(quantity.meaning)), "{text}");
+        assert!(text.lines().all(|line| line.chars().count() <= 80), "{text}");
+    }
+}
+
+#[test]
+fn explain_knows_symbols_flags_keys_and_groups() {
+    for (word, part) in [
+        ("las", "source.largest_angular_size_arcsec"),
+        ("strip-blanks", "flag     Caution of stage brightness"),
+        ("beam-major-arcsec", "flag     --beam-major-arcsec ARCSEC"),
+        ("core", "core.flux_density_mjy  [mJy]"),
+    ] {
+        let text = Run::new(["explain", word]).run().stdout;
+        assert!(text.contains(part), "{word}: {text}");
     }
 }
 

@@ -228,6 +228,8 @@ pub struct PlacedStrip {
     pub follows: [bool; 2],
     /// Straight bearings of the two sides, used where no ridge is followed.
     pub axis_deg: [f64; 2],
+    /// Whether each side ends in a lobe that stands out from its jet.
+    pub lobe: [bool; 2],
 }
 
 impl PlacedStrip {
@@ -245,10 +247,8 @@ impl PlacedStrip {
 
 /// Places the strips; `None` where less than one beam is left between core and lobes.
 ///
-/// Outer end: one beam short of where the nearer lobe begins. A lobe begins, seen from the
-/// hot spot inwards, where the ridge has fallen below twice its median brightness between
-/// two beams and half way (or below a tenth of the hot spot). Sides without a hot spot end
-/// with their ridge; of two such sides the longer ridge counts, since a counter-jet that
+/// Outer end: one beam short of where the nearer lobe begins. A side whose hot spot does not
+/// stand out from its jet has no lobe and ends with its ridge; of two such sides the longer ridge counts, since a counter-jet that
 /// fades is what is to be measured.
 pub fn place_strip(
     sides: [StripSide; 2],
@@ -259,10 +259,15 @@ pub fn place_strip(
     let inner = rule.inner_beams * beam.major;
     let mut outer = f64::INFINITY;
     let mut open_end: f64 = 0.0;
-    for side in sides {
-        match side.hotspot {
-            Some((distance, brightness)) => {
-                outer = outer.min(lobe_start(side.ridge, distance, brightness, inner));
+    let mut lobes = [false; 2];
+    for (side, has_lobe) in sides.into_iter().zip(&mut lobes) {
+        let lobe = side.hotspot.and_then(|(distance, brightness)| {
+            lobe_start(side.ridge, distance, brightness, inner, beam.major)
+        });
+        match lobe {
+            Some(start) => {
+                *has_lobe = true;
+                outer = outer.min(start);
             }
             None => {
                 open_end =
@@ -298,19 +303,49 @@ pub fn place_strip(
     let mut sorted = widths;
     let own = crate::stats::median(&mut sorted).unwrap_or(0.0) * rule.half_width_beams;
     let strip = Strip { inner, outer, half_width: half_width.max(own) };
-    Some(PlacedStrip { strip, reference, follows, axis_deg: ends_deg })
+    Some(PlacedStrip { strip, reference, follows, axis_deg: ends_deg, lobe: lobes })
 }
 
-/// Where a side's lobe begins, radial distance from the core.
-fn lobe_start(ridge: &Ridge, hotspot: f64, brightness: f64, inner: f64) -> f64 {
-    let mut middle: Vec<f64> = ridge
-        .points
-        .iter()
-        .filter(|p| p.distance >= inner && p.distance <= (0.5 * hotspot).max(inner))
-        .map(|p| p.brightness)
-        .collect();
-    let jet = crate::stats::median(&mut middle).unwrap_or(0.0);
-    let threshold = (2.0 * jet).max(0.1 * brightness).min(0.7 * brightness);
+/// A hot spot this many times brighter than the faintest place of the ridge on its way from
+/// the core ends in a lobe; else it is a knot of a jet that goes on.
+const LOBE_CONTRAST: f64 = 2.0;
+/// The highest and the lowest of some ten beams of noise lie this many rms apart.
+const CONTRAST_SIGMA: f64 = 6.0;
+/// A hot spot nearer than this many beam majors to the strip's inner end leaves no jet to
+/// compare it with: it is taken as a lobe's, unless the ridge goes on as far beyond it.
+const LOBE_ROOM_BEAMS: f64 = 2.0;
+
+/// Where a side's lobe begins; `None` where no lobe stands out from the jet.
+///
+/// Walking from the hot spot towards the core, the lobe ends where the ridge has fallen below
+/// twice the jet (its median brightness from the strip's inner end half way to the hot spot),
+/// below 3 rms at the least; near a hot spot too close to see the jet alone, below 0.7 of it.
+fn lobe_start(
+    ridge: &Ridge,
+    hotspot: f64,
+    brightness: f64,
+    inner: f64,
+    beam_major: f64,
+) -> Option<f64> {
+    let room = LOBE_ROOM_BEAMS * beam_major;
+    let goes_on = ridge.points.last().is_some_and(|p| p.distance > hotspot + room);
+    let rms = ridge.points.iter().find(|p| p.distance >= inner).map_or(0.0, |p| p.rms);
+    if hotspot < inner + room && !goes_on {
+        return Some(hotspot);
+    }
+    let before = |from: f64, to: f64| {
+        ridge.points.iter().filter(move |p| p.distance >= from && p.distance <= to)
+    };
+    let faintest = before(0.75 * inner, hotspot).map(|p| p.brightness).fold(brightness, f64::min);
+    if brightness < LOBE_CONTRAST * faintest.max(0.0)
+        || brightness < faintest + CONTRAST_SIGMA * rms
+    {
+        return None;
+    }
+    let mut jet: Vec<f64> =
+        before(inner, (0.5 * hotspot).max(inner)).map(|p| p.brightness).collect();
+    let jet = crate::stats::median(&mut jet).unwrap_or(0.0);
+    let threshold = (2.0 * jet).max(3.0 * rms).min(0.7 * brightness);
     let mut start = hotspot;
     for point in ridge.points.iter().rev().filter(|p| p.distance <= hotspot) {
         if point.brightness < threshold {
@@ -318,7 +353,7 @@ fn lobe_start(ridge: &Ridge, hotspot: f64, brightness: f64, inner: f64) -> f64 {
         }
         start = point.distance;
     }
-    start
+    Some(start)
 }
 
 /// Median signal-to-noise of a ridge between two distances; 0 where it has no point there.

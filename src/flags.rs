@@ -112,6 +112,8 @@ flag_kinds! {
         "The jet side was given by the observer and used as it is: the ratio may be below 1.";
     STRIP_BLANKS = "strip-blanks", Caution, "brightness",
         "{percent} % of the strip is blank or off the map; both strips leave out the same places.";
+    STRIP_OFF_AXIS = "strip-off-axis", Caution, "brightness",
+        "The two sides are {misalignment_deg} degrees from opposition and the fainter one's ridge is too weak to follow: its strip, the brighter one's turned by 180 degrees, may miss its jet, and the ratio come out too high.";
     STRIP_NEAR_BRIGHT = "strip-near-bright", Note, "brightness",
         "Residuals at the strip's distances exceed the map's rms by {factor}; the larger value is used in the errors.";
     INVERTED_INDEX = "spectral-index-rising", Caution, "physics",

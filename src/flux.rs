@@ -40,7 +40,9 @@ pub fn sum_where(
     let variance = ApertureWeights::from_cells(cells)
         .map_or(0.0, |w| correlation.aperture_variance(&w, noise));
     // Mean of n correlated samples: variance σ² ΣC / n, times (number of pixels)².
-    let background = rms_sum * rms_sum * correlation.sum().max(1.0) / background_px.max(1.0);
+    // A source larger than a tile averages the background of several.
+    let resting_on = (background_px + area_px).max(1.0);
+    let background = rms_sum * rms_sum * correlation.sum().max(1.0) / resting_on;
     Sum { value, sigma: (variance.max(0.0) + background).sqrt(), area_px }
 }
 
@@ -81,9 +83,10 @@ mod tests {
         assert!((sum.value - 400.0).abs() < 1e-9 && (sum.area_px - 200.0).abs() < 1e-12);
         // σ √N = 0.5 √200.
         assert!((sum.sigma - 0.5 * 200f64.sqrt()).abs() < 1e-9, "{}", sum.sigma);
-        // A background known from 200 pixels is off by σ/√200 in each of the 200: as much again.
+        // A background known from 200 + 200 pixels is off by σ/√400 in each of the 200: half the
+        // variance again.
         let unsure = sum_where(&window, (&noise, &white), 200.0, |r, _| r < 10);
-        assert!((unsure.sigma - sum.sigma * 2f64.sqrt()).abs() < 1e-9, "{}", unsure.sigma);
+        assert!((unsure.sigma - sum.sigma * 1.5f64.sqrt()).abs() < 1e-9, "{}", unsure.sigma);
     }
 
     #[test]

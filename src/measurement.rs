@@ -26,6 +26,8 @@ pub enum Because {
     NoSource,
     /// No core could be chosen, so nothing can be measured from it.
     NoCore,
+    /// The source leaves the map on both sides.
+    LeavesMap,
     /// The core is too unsure for a number that hangs on it.
     CoreUnsure,
     /// The source is not resolved by the beam.
@@ -162,6 +164,14 @@ impl Measurement {
     pub fn as_lower_limit(self, confidence: f64) -> Self {
         match self {
             Self::Value { value, .. } => Self::lower_limit(value, confidence),
+            other => other,
+        }
+    }
+
+    /// A value as an upper limit.
+    pub fn as_upper_limit(self, confidence: f64) -> Self {
+        match self {
+            Self::Value { value, .. } => Self::upper_limit(value, confidence),
             other => other,
         }
     }

@@ -20,7 +20,7 @@ use crate::source::associate::{Anchor, CHANCE_UNSURE, SourceRegions, associate};
 use crate::source::core::KnownCore;
 use crate::source::{SourceInput, SourceModel, model_source};
 use crate::stats::normal_deviate;
-use crate::units::{Pixel, SkyOffset};
+use crate::units::{Pixel, SkyOffset, wrap_difference_deg};
 
 /// Name of a map in its record.
 #[derive(Clone, Debug, PartialEq, Eq)]
@@ -294,6 +294,14 @@ fn measure_sides(
     let blank = pair.fluxes.iter().map(|f| f.blank_fraction).fold(0.0, f64::max);
     if blank > 0.01 {
         flags.push(Flag::new(flags::STRIP_BLANKS, &[("percent", 100.0 * blank)]));
+    }
+    let misalignment_deg = wrap_difference_deg(ends_deg[1] - ends_deg[0] - 180.0).abs();
+    let follows_both = placed.follows[0] && placed.follows[1];
+    let seen = |k: usize| ridges[k].detected || features[k].hotspot.is_some();
+    let off_axis = misalignment_deg.to_radians() * strip.outer > strip.half_width;
+    if !follows_both && seen(0) && seen(1) && off_axis {
+        let numbers = [("misalignment_deg", misalignment_deg)];
+        flags.push(Flag::new(flags::STRIP_OFF_AXIS, &numbers));
     }
     let pieces = (((strip.outer - strip.inner) / observed.working_beam.major).floor() as usize)
         .clamp(1, 200);

@@ -286,7 +286,7 @@ pub struct SourceRecord {
     /// 180° − angle hot spot–core–hot spot.
     pub bend_deg: Measurement,
     /// From the two sides' bends.
-    pub symmetry: Symmetry,
+    pub symmetry: OrMissing<Symmetry>,
     /// Length over width, both deconvolved.
     pub axial_ratio: Measurement,
     /// Core flux over the rest, observed.

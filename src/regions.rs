@@ -453,7 +453,7 @@ fn refine(grid: &dyn Grid, noise: &Noise, x: usize, y: usize) -> (f64, f64, f64)
     }
     let dx = (e * c - 2.0 * g * b) / determinant;
     let dy = (e * b - 2.0 * d * c) / determinant;
-    if dx.abs() > 0.75 || dy.abs() > 0.75 {
+    if dx.abs() > 1.5 || dy.abs() > 1.5 {
         return centre;
     }
     let mean = (row(0) + row(1) + row(2)) / 9.0;

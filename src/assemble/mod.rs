@@ -11,7 +11,7 @@ mod units;
 
 use std::collections::BTreeMap;
 
-use self::parts::{component_records, component_separation, core_axes_mas};
+use self::parts::{component_records, component_separation, core_axes_mas, core_component};
 use self::roles::order_sides;
 use self::shape::{Arms, arms, fr_ratios, measure_extents};
 use self::side::side_record;
@@ -29,7 +29,7 @@ use crate::pipeline::{MapName, Observed};
 use crate::record::{
     ArmBasis, BrightnessRecord, CoreBasis, CoreRecord, Described, FrClass, FrClassName, Input,
     MapRecord, NoiseRecord, Position, PositionBasis, RECORD_VERSION, Rival, Role, SideRecord,
-    Software, SourcePosition, SourceRecord, Status, Symmetry,
+    Software, SourcePosition, SourceRecord, Status,
 };
 use crate::ridge::Ridge;
 use crate::settings::Settings;
@@ -156,7 +156,7 @@ pub fn assemble_without_source(
             lobe_flux_ratio: none,
             misalignment_deg: none,
             bend_deg: none,
-            symmetry: Symmetry::Undecided,
+            symmetry: OrMissing::missing(because),
             axial_ratio: none,
             core_prominence: none,
             core_prominence_rest: none,
@@ -181,7 +181,10 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     let sums = sum_parts(findings, order.index);
     let core_sum = core_sum(findings, &sums);
     let core_flux = units.flux_of(core_sum);
-    let total = units.flux(sums.total.value, sums.total.sigma);
+    let whole = |m: Measurement| {
+        if model.cut_off { m.as_lower_limit(settings.confidence) } else { m }
+    };
+    let total = whole(units.flux(sums.total.value, sums.total.sigma));
 
     let components = component_records(findings, &units);
     let core_px = model.core.pixel;
@@ -210,6 +213,8 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
             largest_angular_size_arcsec: las_arcsec,
             total_flux_density_mjy: total,
             core_flux_density_mjy: core_flux,
+            core_component_flux_density_mjy: core_component(&components)
+                .map_or(core_flux, |c| c.flux_density_mjy),
             core_axes_mas: core_axes_mas(findings, &units, &components),
             side_length_arcsec: [first_side.length_arcsec, second_side.length_arcsec],
             ..physics_input(map, settings)
@@ -244,7 +249,7 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     let source = SourceRecord {
         position: source_position(map, model),
         total_flux_density_mjy: total,
-        contour_flux_density_mjy: units.flux(sums.contour.value, sums.contour.sigma),
+        contour_flux_density_mjy: whole(units.flux(sums.contour.value, sums.contour.sigma)),
         peak_brightness_mjy_per_beam: if map.saturated > 0 {
             units.brightness(peak.0, rms).as_lower_limit(settings.confidence)
         } else {
@@ -265,13 +270,13 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         arm_length_ratio_basis: arms.basis,
         longer_arm: OrMissing::from_option(arms.longer.map(|k| order.role[k]), arms.because),
         arm_length_ratio_jet_side: arms.unfolded,
-        lobe_flux_ratio: lobe_flux_ratio(&sums, settings),
+        lobe_flux_ratio: lobe_flux_ratio(findings, &sums, order.index),
         misalignment_deg: arms.misalignment_deg,
         bend_deg: arms.bend_deg,
-        symmetry: Symmetry::Undecided,
+        symmetry: OrMissing::missing(Because::NotImplemented),
         axial_ratio: units.deconvolved(extents.axial_ratio),
         core_prominence: prominence,
-        core_prominence_rest: map.description.redshift.map_or(
+        core_prominence_rest: redshift_used(map).map_or(
             Measurement::missing(Because::NoRedshift),
             |redshift| {
                 physics::emission::core_prominence_rest(
@@ -341,9 +346,15 @@ fn physics_input(map: &SkyMap, settings: &Settings) -> PhysicsInput {
         largest_angular_size_arcsec: none,
         total_flux_density_mjy: none,
         core_flux_density_mjy: none,
+        core_component_flux_density_mjy: none,
         core_axes_mas: None,
         side_length_arcsec: [none; 2],
     }
+}
+
+/// The redshift that counts: a distance replaces it, for a source near enough that z = 0.
+fn redshift_used(map: &SkyMap) -> Option<f64> {
+    map.description.distance_mpc.map(|_| 0.0).or(map.description.redshift)
 }
 
 fn assumed_values(map: &SkyMap, flags: &mut Vec<Flag>) {

@@ -13,9 +13,13 @@ const SAME_PLACE_BEAMS: f64 = 0.6;
 
 /// Distance between the two outermost fitted components.
 pub(super) fn component_separation(findings: &Findings) -> Measurement {
+    // Two points are what they are; with more components how many were fitted moves each end.
+    let beam = findings.observed.working_beam.mean_fwhm();
+    let many = findings.components.components.len() > 2;
+    let systematic = if many { 0.05 * beam * std::f64::consts::SQRT_2 } else { 0.0 };
     outermost_separation(&findings.components.components, &findings.model.frame)
         .map_or(Measurement::missing(Because::TooFewFeatures), |(separation, sigma, _)| {
-            Measurement::symmetric(separation, sigma)
+            Measurement::symmetric(separation, sigma.hypot(systematic))
         })
 }
 
@@ -67,6 +71,11 @@ pub(super) fn component_records(findings: &Findings, units: &Units) -> Vec<Compo
         .collect()
 }
 
+/// The component with role core.
+pub(super) fn core_component(components: &[ComponentRecord]) -> Option<&ComponentRecord> {
+    components.iter().find(|c| c.role == ComponentRole::Core)
+}
+
 /// Deconvolved axes of the core in mas: those of the component with role core; where the fit
 /// tells none there but a beam-shaped component was found, it is a point, and the smallest
 /// size that could be told from one stands in as upper limit.
@@ -75,8 +84,7 @@ pub(super) fn core_axes_mas(
     units: &Units,
     components: &[ComponentRecord],
 ) -> Option<[Measurement; 2]> {
-    let component = components.iter().find(|c| c.role == ComponentRole::Core);
-    let axes = match (component, findings.model.core.fit) {
+    let axes = match (core_component(components), findings.model.core.fit) {
         (Some(c), _) => [c.deconvolved.major_arcsec, c.deconvolved.minor_arcsec],
         (None, Some(fit)) => {
             let beam = &findings.observed.working_beam;

@@ -26,11 +26,17 @@ impl Order {
 pub(super) fn order_sides(findings: &Findings, flags: &mut Vec<Flag>) -> Order {
     let map = findings.map;
     let undecided = |sidedness| {
-        let end = findings.model.sides.as_ref().map_or(0.0, |(ridges, features)| {
-            end_offset(&ridges[0], &features[0])
-                .map_or(ridges[0].start_deg, SkyOffset::position_angle_deg)
+        let index = findings.model.sides.as_ref().map_or([0, 1], |(ridges, features)| {
+            let ends = [0, 1].map(|k| {
+                end_offset(&ridges[k], &features[k])
+                    .unwrap_or(SkyOffset::polar(1.0, ridges[k].start_deg))
+            });
+            // Both ends on one half: the side to which the chord points into [0, 180).
+            let eastern = ends.map(|end| end.position_angle_deg() < 180.0);
+            let chord = ends[0].minus(ends[1]).position_angle_deg() < 180.0;
+            let first_leads = if eastern[0] == eastern[1] { chord } else { eastern[0] };
+            if first_leads { [0, 1] } else { [1, 0] }
         });
-        let index = if end < 180.0 { [0, 1] } else { [1, 0] };
         Order { index, role: [Role::First, Role::Second], sidedness }
     };
     let jet_first = |first: usize, sidedness| Order {

@@ -1,5 +1,6 @@
 //! Sizes, arms and the Fanaroff–Riley ratio of the whole source.
 
+use super::sums::of_cut_sides;
 use super::{Findings, end_offset};
 use crate::extent::{Extent, feature_sigma, resolution_limit, widest_across};
 use crate::measurement::{Because, Measurement};
@@ -86,7 +87,7 @@ impl Arms {
     }
 }
 
-/// 1σ of a side's end along each axis: a hot spot's fit error, or a quarter beam for a ridge
+/// 1σ of a side's end along each axis: a hot spot's fit error, or half a beam for a ridge
 /// that fades.
 pub(super) fn end_sigma(findings: &Findings, k: usize) -> f64 {
     let beam = findings.observed.working_beam.mean_fwhm();
@@ -122,6 +123,9 @@ pub(super) fn arms(findings: &Findings, order: [usize; 2]) -> Arms {
             + (sigma[1] / rb).powi(2)
             + (core_sigma * (1.0 / ra + 1.0 / rb)).powi(2))
         .sqrt();
+    let cut = order.map(|k| findings.model.side_cut[k]);
+    let confidence = findings.settings.confidence;
+    let either_cut = cut.contains(&true);
     let misalignment = wrap_difference_deg(b.position_angle_deg() - a.position_angle_deg() - 180.0);
     let misalignment_sigma = ((sigma[0] / ra).powi(2)
         + (sigma[1] / rb).powi(2)
@@ -136,16 +140,22 @@ pub(super) fn arms(findings: &Findings, order: [usize; 2]) -> Arms {
             wrap_undirected_deg(chord.position_angle_deg()),
             angle_sigma,
         ),
-        hotspot_separation: if both_hotspots {
+        hotspot_separation: if both_hotspots && either_cut {
+            Measurement::lower_limit(chord.radius(), confidence)
+        } else if both_hotspots {
             Measurement::symmetric(chord.radius(), chord_sigma)
         } else {
             Measurement::missing(Because::NoHotspot)
         },
-        folded: Measurement::value(folded, folded_sigma.min(folded - 1.0), folded_sigma),
-        unfolded: Measurement::symmetric(unfolded, unfolded_sigma),
+        folded: if either_cut {
+            Measurement::missing(Because::LeavesMap)
+        } else {
+            Measurement::value(folded, folded_sigma.min(folded - 1.0), folded_sigma)
+        },
+        unfolded: of_cut_sides(Measurement::symmetric(unfolded, unfolded_sigma), cut, confidence),
         basis: if both_hotspots { ArmBasis::Hotspots } else { ArmBasis::Ends },
-        longer: Some(usize::from(unfolded < 1.0)),
-        because: Because::SideNotDetected,
+        longer: (!either_cut).then_some(usize::from(unfolded < 1.0)),
+        because: if either_cut { Because::LeavesMap } else { Because::SideNotDetected },
         misalignment_deg: Measurement::symmetric(misalignment, misalignment_sigma),
         bend_deg: Measurement::value(
             misalignment.abs(),

@@ -5,7 +5,7 @@ use super::sums::Sums;
 use super::units::Units;
 use super::{Findings, end_offset};
 use crate::brightness::positive_upper_limit;
-use crate::extent::{Extent, feature_sigma, position_sigma};
+use crate::extent::{Extent, FARTHEST_POINT, feature_sigma, position_sigma};
 use crate::measurement::{Bare, Because, Measurement, OrMissing};
 use crate::record::{HotspotRecord, JetRecord, LobeRecord, RidgePointRecord, Role, SideRecord};
 use crate::ridge::Ridge;
@@ -26,6 +26,10 @@ pub(super) fn side_record(
     };
     let (ridge, side) = (&ridges[k], &features[k]);
     let flux = units.flux(sums.sides[k].value, sums.sides[k].sigma);
+    let cut = |m: Measurement| {
+        if model.side_cut[k] { m.as_lower_limit(settings.confidence) } else { m }
+    };
+    let flux = cut(flux);
     if !ridge.detected && side.hotspot.is_none() {
         let mut record = SideRecord::missing(role, Because::SideNotDetected);
         record.flux_density_mjy = flux;
@@ -75,7 +79,7 @@ pub(super) fn side_record(
         signal_to_noise: h.peak.signal_to_noise,
     });
     let record_index = usize::from(matches!(role, Role::CounterJet | Role::Second));
-    let lobe = lobe_record(findings, units, sums, record_index, size);
+    let lobe = lobe_record(findings, units, sums, (k, record_index), size);
     let peak = model.peaks.first().map_or(1.0, |p| p.value);
     SideRecord {
         role,
@@ -90,7 +94,7 @@ pub(super) fn side_record(
         } else {
             units.arcsec(Measurement::symmetric(
                 ridge.length(),
-                (0.5 * beam.mean_fwhm()).hypot(core_sigma),
+                (0.1 * beam.mean_fwhm()).hypot(core_sigma),
             ))
         },
         length_kpc: Measurement::missing(Because::NoRedshift),
@@ -138,8 +142,8 @@ pub(super) fn side_size(findings: &Findings, k: usize) -> (Measurement, Measurem
         [model.frame.origin, pixel],
     );
     let length = offset.radius();
-    let sigma = extent.ends[1].sigma.hypot(model.core.position_sigma);
-    let size = if model.cut_off {
+    let sigma = (FARTHEST_POINT * extent.ends[1].sigma).hypot(model.core.position_sigma);
+    let size = if model.side_cut[k] {
         Measurement::lower_limit(length, settings.confidence)
     } else {
         Measurement::symmetric(length, sigma)
@@ -155,7 +159,7 @@ pub(super) fn side_size(findings: &Findings, k: usize) -> (Measurement, Measurem
             settings.confidence,
         ),
     };
-    (size, if model.cut_off { fr_of_cut(fr, settings.confidence) } else { fr })
+    (size, if model.side_cut[k] { fr_of_cut(fr, settings.confidence) } else { fr })
 }
 
 /// A ratio over a length that is only known from below is an upper limit.
@@ -228,7 +232,7 @@ pub(super) fn lobe_record(
     findings: &Findings,
     units: &Units,
     sums: &Sums,
-    index: usize,
+    (model_index, index): (usize, usize),
     size: Measurement,
 ) -> OrMissing<LobeRecord> {
     let (Some(lobes), Some(strips)) = (sums.lobes, &findings.strips) else {
@@ -236,6 +240,9 @@ pub(super) fn lobe_record(
     };
     let edge = strips.placed.strip.outer + findings.observed.working_beam.major;
     let lobe = lobes[index];
+    if !strips.placed.lobe[model_index] {
+        return OrMissing::missing(Because::NoLobe);
+    }
     let seen = lobe.value >= findings.settings.ratio_value_sigma * lobe.sigma;
     if lobe.area_px < 1.0 || !seen || size.best().is_some_and(|length| length <= edge) {
         return OrMissing::missing(Because::NoLobe);
@@ -243,7 +250,11 @@ pub(super) fn lobe_record(
     let beam = findings.observed.working_beam.mean_fwhm();
     let signal = (lobe.value / lobe.sigma.max(f64::MIN_POSITIVE)).max(1.0);
     OrMissing::Present(LobeRecord {
-        flux_density_mjy: units.flux(lobe.value, lobe.sigma),
+        flux_density_mjy: if findings.model.side_cut[model_index] {
+            units.flux(lobe.value, lobe.sigma).as_lower_limit(findings.settings.confidence)
+        } else {
+            units.flux(lobe.value, lobe.sigma)
+        },
         length_arcsec: units.arcsec(size.increasing(|s| s - edge)),
         width_arcsec: units.arcsec(sums.lobe_width[index].map_or(
             Measurement::missing(Because::NoLobe),

@@ -123,7 +123,8 @@ pub(super) fn peak_ratio(findings: &Findings, order: &Order, strips: &Strips) ->
             denominator_variance: counter.1 * counter.1,
             covariance: 0.0,
         },
-        findings.settings.ratio_value_sigma,
+        // A maximum over noise is biased upwards: only strong peaks make a value.
+        findings.settings.follow_ridge_sigma,
         findings.settings.confidence,
     )
 }

@@ -5,7 +5,6 @@ use crate::brightness::{FluxPair, ratio};
 use crate::flux::{Sum, sum_where, widened};
 use crate::measurement::{Because, Measurement};
 use crate::regions::Region;
-use crate::settings::Settings;
 use crate::source::sides::side_of;
 use crate::units::SkyOffset;
 
@@ -109,12 +108,18 @@ pub(super) fn brightest_region(findings: &Findings) -> (f64, f64) {
         .fold((0.0, 0.0), |a, b| if b.0 > a.0 { b } else { a })
 }
 
-pub(super) fn lobe_flux_ratio(sums: &Sums, settings: &Settings) -> Measurement {
+/// Lobe flux of the record's first side over that of the second.
+pub(super) fn lobe_flux_ratio(findings: &Findings, sums: &Sums, order: [usize; 2]) -> Measurement {
+    let settings = findings.settings;
+    let has_lobe = |k: usize| findings.strips.as_ref().is_some_and(|s| s.placed.lobe[k]);
+    if !order.iter().all(|&k| has_lobe(k)) {
+        return Measurement::missing(Because::NoLobe);
+    }
     let Some([a, b]) = sums.lobes else { return Measurement::missing(Because::NoLobe) };
     if a.area_px < 1.0 || b.area_px < 1.0 {
         return Measurement::missing(Because::NoLobe);
     }
-    ratio(
+    let whole = ratio(
         FluxPair {
             numerator: a.value,
             denominator: b.value,
@@ -124,5 +129,16 @@ pub(super) fn lobe_flux_ratio(sums: &Sums, settings: &Settings) -> Measurement {
         },
         settings.ratio_value_sigma,
         settings.confidence,
-    )
+    );
+    of_cut_sides(whole, order.map(|k| findings.model.side_cut[k]), settings.confidence)
+}
+
+/// A ratio of two sides of which one or both leave the map: what is missing makes it a limit.
+pub(super) fn of_cut_sides(ratio: Measurement, cut: [bool; 2], confidence: f64) -> Measurement {
+    match cut {
+        [false, false] => ratio,
+        [true, false] => ratio.as_lower_limit(confidence),
+        [false, true] => ratio.as_upper_limit(confidence),
+        [true, true] => Measurement::missing(Because::LeavesMap),
+    }
 }

@@ -42,6 +42,9 @@ pub struct PhysicsInput {
     pub total_flux_density_mjy: Measurement,
     /// Flux density of the core in mJy.
     pub core_flux_density_mjy: Measurement,
+    /// Flux density in mJy of the very component whose axes follow; the core's where none is
+    /// told apart.
+    pub core_component_flux_density_mjy: Measurement,
     /// Deconvolved axes (FWHM, major and minor) of the core's component in mas; an upper
     /// limit where the axis is below the resolution limit.
     pub core_axes_mas: Option<[Measurement; 2]>,
@@ -268,7 +271,7 @@ impl Place {
 /// The error of a value is first order, in quadrature of the fractional errors.
 fn core_brightness_temperature_k(input: &PhysicsInput, place: &Place) -> Measurement {
     let missing = Measurement::missing;
-    let flux = input.core_flux_density_mjy;
+    let flux = input.core_component_flux_density_mjy;
     if flux.is_missing() {
         return flux;
     }

@@ -27,6 +27,7 @@ fn input() -> PhysicsInput {
         largest_angular_size_arcsec: Measurement::symmetric(20.0, 1.0),
         total_flux_density_mjy: Measurement::symmetric(300.0, 10.0),
         core_flux_density_mjy: Measurement::symmetric(50.0, 1.0),
+        core_component_flux_density_mjy: Measurement::symmetric(50.0, 1.0),
         core_axes_mas: Some([Measurement::symmetric(2.0, 0.1), Measurement::symmetric(1.0, 0.1)]),
         side_length_arcsec: [
             Measurement::symmetric(11.0, 0.5),
@@ -188,6 +189,7 @@ fn what_is_not_known_is_missing_with_its_reason() {
     let unnamed = physics(&PhysicsInput {
         total_flux_density_mjy: Measurement::missing(Because::NoFluxUnit),
         core_flux_density_mjy: Measurement::missing(Because::NoCore),
+        core_component_flux_density_mjy: Measurement::missing(Because::NoCore),
         ..input()
     });
     assert_eq!(unnamed.physics.luminosity_w_per_hz, Measurement::missing(Because::NoFluxUnit));
@@ -202,6 +204,7 @@ fn limits_of_size_and_flux_reach_the_temperature_on_the_right_side() {
     let with = |flux: Measurement, major: Measurement, minor: Measurement| {
         physics(&PhysicsInput {
             core_flux_density_mjy: flux,
+            core_component_flux_density_mjy: flux,
             core_axes_mas: Some([major, minor]),
             ..input()
         })
@@ -259,6 +262,7 @@ fn no_input_makes_a_number_that_is_not_finite() {
                         largest_angular_size_arcsec: m,
                         total_flux_density_mjy: m,
                         core_flux_density_mjy: m,
+                        core_component_flux_density_mjy: m,
                         core_axes_mas: Some([m, m]),
                         side_length_arcsec: [m, m],
                     });

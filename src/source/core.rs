@@ -5,6 +5,7 @@
 //! compact component in the middle of the source, or the bright compact end of a one-sided
 //! one. Confidences are ranks between the candidates, not yet calibrated frequencies.
 
+use crate::extent::position_sigma;
 use crate::map::beam::Beam;
 use crate::map::geometry::LocalFrame;
 use crate::noise::{ApertureWeights, Noise, NoiseCorrelation};
@@ -71,7 +72,7 @@ pub struct KnownCore {
 /// A component within this many beam majors of the host is taken as the core.
 const HOST_REACH_BEAMS: f64 = 0.6;
 /// Signal-to-noise a beam-shaped component needs to count as detected.
-const CORE_DETECTION_SIGMA: f64 = 3.0;
+pub const CORE_DETECTION_SIGMA: f64 = 3.0;
 
 /// Chooses the core among the source's peaks.
 ///
@@ -269,27 +270,88 @@ fn core_without_host(
     }
 }
 
+/// What a beam-shaped component is fitted on.
+#[derive(Clone, Copy)]
+enum Base<'a> {
+    /// A sloping plane, inside one beam major.
+    Plane,
+    /// A level, and jets that start at the place in these directions, inside 1.5 beam majors.
+    Jets(&'a [f64]),
+}
+
 /// Least-squares fit of a beam-shaped component on a sloping plane inside one beam major of
 /// the start. The position moves by Gauss–Newton steps where `free`. The error of the peak is
 /// that of the linear estimator under the map's measured noise correlation.
 ///
-/// The plane takes jet and lobe emission off only as far as it is smooth over two beams.
+/// The plane takes jet and lobe emission off only as far as it is smooth over two beams; see
+/// [`fit_point_on_jets`].
 pub fn fit_point(
     window: &Window,
     start: Pixel,
     free: bool,
     beam: &Beam,
     frame: &LocalFrame,
+    noise: (&Noise, &NoiseCorrelation),
+) -> Option<PointFit> {
+    fit_on(window, start, free, Base::Plane, beam, frame, noise)
+}
+
+/// The same at a place from which jets start in known directions (position angles, one or
+/// two): each is a line of constant brightness that begins at the place, seen through the
+/// beam. The position stays.
+pub fn fit_point_on_jets(
+    window: &Window,
+    place: Pixel,
+    bearings_deg: &[f64],
+    beam: &Beam,
+    frame: &LocalFrame,
+    noise: (&Noise, &NoiseCorrelation),
+) -> Option<PointFit> {
+    fit_on(window, place, false, Base::Jets(bearings_deg), beam, frame, noise)
+}
+
+/// Brightness at an offset from the start of a half-line of unit brightness in a direction,
+/// through the beam: a Gaussian across, an error function along.
+///
+/// A line across an elliptical beam is blurred along it by the beam's cut in its direction;
+/// that the two are not independent for a tilted beam is left out.
+fn half_line(beam: &Beam, offset: SkyOffset, bearing_deg: f64) -> f64 {
+    let along = offset.dot(SkyOffset::polar(1.0, bearing_deg));
+    let across = offset.dot(SkyOffset::polar(1.0, bearing_deg + 90.0));
+    let width = beam.projected_fwhm(bearing_deg);
+    let length = beam.reach_along(bearing_deg);
+    let profile = (-4.0 * std::f64::consts::LN_2 * (across / width).powi(2)).exp();
+    profile * 0.5 * libm::erfc(-2.0 * std::f64::consts::LN_2.sqrt() * along / length)
+}
+
+fn fit_on(
+    window: &Window,
+    start: Pixel,
+    free: bool,
+    base: Base,
+    beam: &Beam,
+    frame: &LocalFrame,
     (noise, correlation): (&Noise, &NoiseCorrelation),
 ) -> Option<PointFit> {
     let scale = frame.mean_scale();
-    let reach_px = (1.0 * beam.major / scale).max(2.0);
+    let beams = match base {
+        Base::Plane => 1.0,
+        Base::Jets(_) => 1.5,
+    };
+    let reach_px = (beams * beam.major / scale).max(2.0);
     let mut centre = start;
     let mut solution = None;
     for step in 0..6 {
         let cells = cells_within(window, start, reach_px);
         let moving = free && step < 5;
-        let columns = if moving { 6 } else { 4 };
+        if !free && step < 5 {
+            continue;
+        }
+        let columns = match (base, moving) {
+            (_, true) => 6,
+            (Base::Jets([_]), false) => 3,
+            _ => 4,
+        };
         if cells.len() < columns + 2 {
             return None;
         }
@@ -299,20 +361,23 @@ pub fn fit_point(
                 let d = frame.difference(centre, window.pixel(r, c));
                 let g = beam.profile(d);
                 let slope = beam.log_gradient(d);
-                [
-                    1.0,
-                    d.east / beam.major,
-                    d.north / beam.major,
-                    g,
-                    -slope.east * g,
-                    -slope.north * g,
-                ]
+                let moved = [-slope.east * g, -slope.north * g];
+                match base {
+                    Base::Plane => {
+                        [1.0, g, d.east / beam.major, d.north / beam.major, moved[0], moved[1]]
+                    }
+                    Base::Jets(bearings) => {
+                        let jet =
+                            |k: usize| bearings.get(k).map_or(0.0, |b| half_line(beam, d, *b));
+                        [1.0, g, jet(0), jet(1), moved[0], moved[1]]
+                    }
+                }
             })
             .collect();
         let values: Vec<f64> = cells.iter().map(|&(r, c)| window.brightness[[r, c]]).collect();
         let fit = linear_fit(&design, &values, columns)?;
         if moving {
-            let amplitude = fit.coefficients[3];
+            let amplitude = fit.coefficients[1];
             if amplitude <= 0.0 {
                 return None;
             }
@@ -329,20 +394,24 @@ pub fn fit_point(
         solution = Some((fit, cells));
     }
     let (fit, cells) = solution?;
-    let estimator = fit.estimator(3);
+    let estimator = fit.estimator(1);
     let weights = ApertureWeights::from_cells(
         cells.iter().zip(&estimator).map(|(&(r, c), &w)| (window.x0 + c, window.y0 + r, w)),
     )?;
     let peak_sigma = correlation.aperture_variance(&weights, noise).max(0.0).sqrt();
-    let peak = fit.coefficients[3];
-    let signal = (peak / peak_sigma.max(f64::MIN_POSITIVE)).max(1.0);
+    let peak = fit.coefficients[1];
+    let signal = peak / peak_sigma.max(f64::MIN_POSITIVE);
     Some(PointFit {
         pixel: centre,
         peak,
         peak_sigma,
-        base: fit.coefficients[0],
-        // Point source in kernel-smoothed noise, unweighted fit: 0.60 FWHM over S/N.
-        position_sigma: 0.60 * (beam.major * beam.minor).sqrt() / signal,
+        base: fit.coefficients[0]
+            + match base {
+                Base::Plane => 0.0,
+                // A half-line stands at half its brightness at its start.
+                Base::Jets(_) => 0.5 * fit.coefficients[2..].iter().sum::<f64>(),
+            },
+        position_sigma: position_sigma((beam.major * beam.minor).sqrt(), signal),
         residual: fit.residual_rms,
     })
 }
@@ -507,6 +576,34 @@ mod tests {
         assert!(fit.pixel.distance_px(truth) < 1e-6, "{:?}", fit.pixel);
         assert!((fit.peak - 5.0).abs() < 1e-6);
         assert!(fit.residual < 1e-6);
+    }
+
+    #[test]
+    fn jets_that_start_at_the_core_are_taken_off() {
+        // A line of points half a pixel apart for each jet, summed through the beam: brightness
+        // 3 and 1 per beam on the ridge, at 30° and 200°.
+        let core = Pixel::new(30.0, 30.0);
+        let frame = frame();
+        let mut points = vec![(core, 5.0)];
+        for (bearing, level) in [(30.0, 3.0), (200.0, 1.0)] {
+            let step = 0.1;
+            // Points of peak p every `step` along a line add up to p · (cut of the beam along
+            // the line) · 1.0645 / step.
+            let peak = level * step / (1.064_467 * beam().reach_along(bearing));
+            for k in 0..130 {
+                let d = (f64::from(k) + 0.5) * step;
+                points.push((frame.moved(core, SkyOffset::polar(d, bearing)), peak));
+            }
+        }
+        let window = window(&points, 0.2, 0.0);
+        let (noise, correlation) = noise();
+        let noise = (&noise, &correlation);
+        let on_jets = fit_point_on_jets(&window, core, &[30.0, 200.0], &beam(), &frame, noise);
+        let peak = on_jets.expect("a fit").peak;
+        assert!((peak - 5.0).abs() < 0.03, "{peak}");
+        // What a sloping plane makes of it: part of the jets' start counts as core.
+        let on_plane = fit_point(&window, core, false, &beam(), &frame, noise).expect("a fit");
+        assert!(on_plane.peak > 5.5, "{}", on_plane.peak);
     }
 
     #[test]

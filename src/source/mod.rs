@@ -20,8 +20,10 @@ use crate::units::Pixel;
 use crate::window::Window;
 
 use self::associate::SourceRegions;
-use self::core::{Core, KnownCore, Peak, choose_core};
-use self::sides::{SideFeatures, find_features};
+use self::core::{
+    CORE_DETECTION_SIGMA, Core, KnownCore, Peak, PointFit, choose_core, fit_point_on_jets,
+};
+use self::sides::{SideFeatures, find_features, side_of};
 
 /// What the source stages need to know of the map.
 #[derive(Clone, Copy)]
@@ -63,8 +65,10 @@ pub struct SourceModel {
     pub level: f64,
     /// Points of the contour.
     pub contour: Vec<Pixel>,
-    /// Whether the contour meets the map's edge or a blank patch.
+    /// Whether the contour's outer parts meet the map's edge or a blank patch.
     pub cut_off: bool,
+    /// The same for each side.
+    pub side_cut: [bool; 2],
     /// The two contour points farthest apart.
     pub ends: [Pixel; 2],
     /// Local maxima, brightest first.
@@ -105,12 +109,14 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
     let least_px = 0.5 * input.beam.area_px(input.geometry);
     let own = islands_above(&window, level, least_px);
     let lines = contour_lines(&OwnContour { window: &window, own: &own, level }, level, None);
-    let cut_off = lines.iter().any(|line| !line.is_closed());
-    let points: Vec<Pixel> = lines
+    let on_map = |p: &Pixel| Pixel::new(p.x + window.x0 as f64, p.y + window.y0 as f64);
+    let open_ends: Vec<Pixel> = lines
         .iter()
-        .flat_map(|line| &line.points)
-        .map(|p| Pixel::new(p.x + window.x0 as f64, p.y + window.y0 as f64))
+        .filter(|line| !line.is_closed())
+        .flat_map(|line| line.points.first().into_iter().chain(line.points.last()))
+        .map(on_map)
         .collect();
+    let points: Vec<Pixel> = lines.iter().flat_map(|line| &line.points).map(on_map).collect();
     let (first, second, _) = farthest_pair(points.iter().copied(), &rough.to_sky)?;
     let ends = [first, second];
 
@@ -130,7 +136,7 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
     })
     .collect();
 
-    let core = choose_core(
+    let mut core = choose_core(
         &window,
         &peaks,
         input.known,
@@ -141,7 +147,7 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
         input.z_confidence,
     );
     let frame = input.geometry.local_frame(core.pixel.unwrap_or(middle));
-    let coreless = without_core(&window, &core, input.beam, &frame);
+    let mut coreless = without_core(&window, &core, input.beam, &frame);
     let sides = core.pixel.map(|_| {
         let context = RidgeContext {
             frame: &frame,
@@ -155,12 +161,22 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
             find_features(&peaks, &points, &ridges, &frame, input.beam, level, core.fit.is_some());
         (ridges, features)
     });
+    if let Some((ridges, features)) = &sides
+        && let Some(fit) = refit_core(input, &window, &core, &frame, ridges, features)
+    {
+        core.fit = Some(fit);
+        coreless = without_core(&window, &core, input.beam, &frame);
+    }
+    let side_cut = sides.as_ref().map_or([!open_ends.is_empty(); 2], |(ridges, features)| {
+        cut_sides(&open_ends, ridges, features, &frame)
+    });
     Some(SourceModel {
         window,
         coreless,
         level,
         contour: points,
-        cut_off,
+        cut_off: side_cut.contains(&true),
+        side_cut,
         ends,
         peaks,
         core,
@@ -168,6 +184,59 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
         middle,
         sides,
     })
+}
+
+/// A contour that is open this far out, as a share of the side's length, cuts the side off; a
+/// hole nearer to the core does not.
+const CUT_BEYOND: f64 = 0.8;
+
+/// Which sides are cut off by the map's edge or a blank patch.
+fn cut_sides(
+    open_ends: &[Pixel],
+    ridges: &[Ridge; 2],
+    features: &[SideFeatures; 2],
+    frame: &LocalFrame,
+) -> [bool; 2] {
+    let mut cut = [false; 2];
+    for &end in open_ends {
+        let offset = frame.offset(end);
+        let side = side_of(ridges, offset);
+        let length = features[side].farthest.map_or(0.0, |(_, far)| far.radius());
+        cut[side] |= offset.radius() >= CUT_BEYOND * length;
+    }
+    cut
+}
+
+/// Hot spots nearer than this many beam majors leave no room to tell jets from core.
+const REFIT_BEAMS: f64 = 2.5;
+
+/// The core's component again, now on jets that start at it in the directions of the traced
+/// ridges. `None` where the core is not detected, no jet is traced, or a hot spot is too near.
+fn refit_core(
+    input: &SourceInput,
+    window: &Window,
+    core: &Core,
+    frame: &LocalFrame,
+    ridges: &[Ridge; 2],
+    features: &[SideFeatures; 2],
+) -> Option<PointFit> {
+    let first = core.fit?;
+    let reach = REFIT_BEAMS * input.beam.major;
+    let near = |side: &SideFeatures| side.hotspot.is_some_and(|h| h.distance() < reach);
+    if features.iter().any(near) {
+        return None;
+    }
+    let bearings: Vec<f64> = ridges
+        .iter()
+        .filter(|ridge| ridge.points.last().is_some_and(|p| p.distance >= reach))
+        .map(|ridge| ridge.bearing_at(input.beam.major))
+        .collect();
+    if bearings.is_empty() {
+        return None;
+    }
+    let noise = (input.noise, input.correlation);
+    let fit = fit_point_on_jets(window, first.pixel, &bearings, input.beam, frame, noise)?;
+    (fit.peak > CORE_DETECTION_SIGMA * fit.peak_sigma).then_some(fit)
 }
 
 /// The source's pixels at or above the level, without islands smaller than `least_px`: where

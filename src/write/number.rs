@@ -75,6 +75,7 @@ pub const fn reason(because: Because) -> &'static str {
         Because::OutOfDomain => "no solution for what was measured",
         Because::NoNoiseEstimate => "noise not known",
         Because::TooFewFeatures => "too few features",
+        Because::LeavesMap => "the source leaves the map",
         Because::CoreUnsure => "the core is too unsure; give it or the host",
         Because::NotRead => "file not read",
         Because::NotImplemented => "not measured by this version",

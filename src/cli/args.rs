@@ -22,7 +22,7 @@ it missing, with the reason.";
 const MEASURE_EXAMPLES: &str = "\
 Examples:
   One map, its description beside it, table on the screen:
-    jetspan measure cluster.npy
+    jetspan measure lantern-double.npy
   A map described by flags, record to standard output:
     jetspan measure field.png --pixel-scale-arcsec 1.5 --beam-major-arcsec 5 \\
         --unit mJy/beam --value-scale 0.02 --redshift 0.12 --json -
@@ -34,7 +34,7 @@ Exit status: 0 all maps measured (also where nothing was found), 1 some map fail
 
 const EXAMPLES: &str = "\
 Examples:
-  jetspan measure cluster.npy
+  jetspan measure lantern-double.npy
   jetspan explain jet_to_counter_jet_ratio
   jetspan schema record
 `jetspan measure --help` says what a map may be and how it is described.";

@@ -190,13 +190,16 @@ struct Candidate {
 }
 
 /// Peaks fainter than this share of the brightest do not count as the source's outermost.
-const OUTERMOST_BRIGHTNESS: f64 = 0.1;
+const OUTERMOST_BRIGHTNESS: f64 = 0.02;
+/// Ends whose peaks are less alike than this speak for a one-sided source.
+const LEAST_EVENNESS: f64 = 0.2;
 
 /// The core where neither it nor the host is known.
 ///
 /// Between the outermost peaks a candidate counts by how compact and how central it is. An
 /// outermost peak is the core only of a one-sided source: it must outshine every other peak
-/// by more than two to one; two alike are hot spots, and then no core is chosen.
+/// by more than two to one; two alike are hot spots, and then no core is chosen. Candidates
+/// in between count for less the less alike the two ends are.
 fn core_without_host(
     peaks: &[Peak],
     ends: [Pixel; 2],
@@ -213,6 +216,15 @@ fn core_without_host(
     let (low, high) = outer.fold((f64::INFINITY, f64::NEG_INFINITY), |(low, high), p| {
         (low.min(place(p.pixel)), high.max(place(p.pixel)))
     });
+    // A source whose one end outshines the other by far is a core with a jet to one side, and
+    // what lies between are knots.
+    let end_value = |end: f64| {
+        let at_end = peaks.iter().filter(|p| (place(p.pixel) - end).abs() < 1e-9);
+        at_end.map(|p| p.value).fold(0.0, f64::max)
+    };
+    let (one, other) = (end_value(low), end_value(high));
+    let evenness = one.min(other) / one.max(other).max(f64::MIN_POSITIVE);
+    let two_sided = (evenness / LEAST_EVENNESS).min(1.0);
     let mut candidates: Vec<Candidate> = peaks
         .iter()
         .filter_map(|peak| {
@@ -234,7 +246,9 @@ fn core_without_host(
             let (basis, fitness) = if single && (along - 0.5).abs() < 0.2 {
                 (CoreBasis::CompactCentral, 1.0)
             } else if !single && central > 0.1 {
-                (CoreBasis::CompactCentral, central)
+                // Neither end is brighter than this one: it is the core of what lies around.
+                let leads = peak.value >= one.max(other);
+                (CoreBasis::CompactCentral, if leads { central } else { central * two_sided })
             } else {
                 (CoreBasis::OneSidedEnd, (1.0 - 2.0 * rival).max(0.0))
             };

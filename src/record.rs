@@ -543,6 +543,23 @@ pub struct BrightnessRecord {
     pub sidedness_sigma: Bare,
 }
 
+impl BrightnessRecord {
+    /// No strips, for one reason.
+    pub fn missing(because: Because) -> Self {
+        let none = Measurement::missing(because);
+        Self {
+            jet_to_counter_jet_ratio: none,
+            jet_flux_density_mjy: none,
+            counter_jet_flux_density_mjy: none,
+            strip_covariance_mjy2: Bare::missing(because),
+            aperture: OrMissing::missing(because),
+            peak_ratio: none,
+            profile: Vec::new(),
+            sidedness_sigma: Bare::missing(because),
+        }
+    }
+}
+
 /// The record of a map that could be read and whose noise is known.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize, JsonSchema)]
 pub struct MapRecord {

@@ -102,16 +102,7 @@ pub fn assemble_without_source(
     let units = Units::new(map, observed);
     let middle = (0.5 * (map.columns as f64 - 1.0), 0.5 * (map.rows as f64 - 1.0));
     let noise = noise_record(observed, &units, Pixel::new(middle.0, middle.1), None, None);
-    let brightness = BrightnessRecord {
-        jet_to_counter_jet_ratio: none,
-        jet_flux_density_mjy: none,
-        counter_jet_flux_density_mjy: none,
-        strip_covariance_mjy2: Bare::missing(because),
-        aperture: OrMissing::missing(because),
-        peak_ratio: none,
-        profile: Vec::new(),
-        sidedness_sigma: Bare::missing(because),
-    };
+    let brightness = BrightnessRecord::missing(because);
     let physics = constrain_physics(&physics_input(map, settings), &settings.cosmology);
     assumed_values(map, &mut flags);
     MapRecord {

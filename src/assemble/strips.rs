@@ -15,18 +15,8 @@ pub(super) fn brightness_record(
 ) -> BrightnessRecord {
     let because =
         if findings.model.sides.is_none() { Because::NoCore } else { Because::NoRoomForStrip };
-    let none = Measurement::missing(because);
     let Some(strips) = &findings.strips else {
-        return BrightnessRecord {
-            jet_to_counter_jet_ratio: none,
-            jet_flux_density_mjy: none,
-            counter_jet_flux_density_mjy: none,
-            strip_covariance_mjy2: Bare::missing(because),
-            aperture: OrMissing::missing(because),
-            peak_ratio: none,
-            profile: Vec::new(),
-            sidedness_sigma: Bare::missing(because),
-        };
+        return BrightnessRecord::missing(because);
     };
     let settings = findings.settings;
     let [a, b] = order.index;

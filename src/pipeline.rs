@@ -1,5 +1,6 @@
-//! One map, end to end: the stages in their order. What they find is put into the record by
-//! [`crate::assemble`]; no arithmetic here.
+//! One map, end to end: the stages in their order, and the flags that need more than one of
+//! them. What they find is put into the record by [`crate::assemble`]; numbers are formed in
+//! the stages.
 
 use crate::assemble::{Findings, Strips, assemble, assemble_without_source};
 use crate::brightness::{
@@ -18,6 +19,7 @@ use crate::regions::{Region, RegionSettings, find_regions, region_mask};
 use crate::settings::Settings;
 use crate::source::associate::{Anchor, CHANCE_UNSURE, SourceRegions, associate};
 use crate::source::core::KnownCore;
+use crate::source::sides::end_offset;
 use crate::source::{SourceInput, SourceModel, model_source};
 use crate::stats::normal_deviate;
 use crate::units::{Pixel, SkyOffset, wrap_difference_deg};
@@ -252,7 +254,7 @@ fn measure_sides(
         hotspot: features[k].hotspot.map(|h| (h.distance(), h.peak.value)),
     };
     let ends_deg = [0, 1].map(|k| {
-        crate::assemble::end_offset(&ridges[k], &features[k])
+        end_offset(&ridges[k], &features[k])
             .map_or(ridges[k].start_deg, SkyOffset::position_angle_deg)
     });
     let placed: PlacedStrip =

@@ -16,7 +16,7 @@ use self::roles::order_sides;
 use self::shape::{Arms, arms, fr_ratios, measure_extents};
 use self::side::side_record;
 use self::strips::brightness_record;
-use self::sums::{brightest_region, core_sum, lobe_flux_ratio, sum_parts};
+use self::sums::{core_sum, lobe_flux_ratio, sum_parts};
 use self::units::Units;
 use crate::brightness::{PlacedStrip, StripPair};
 use crate::class::classify;
@@ -31,12 +31,10 @@ use crate::record::{
     MapRecord, NoiseRecord, Position, PositionBasis, RECORD_VERSION, Rival, Role, SideRecord,
     Software, SourcePosition, SourceRecord, Status,
 };
-use crate::ridge::Ridge;
 use crate::settings::Settings;
 use crate::source::SourceModel;
 use crate::source::associate::SourceRegions;
-use crate::source::sides::SideFeatures;
-use crate::units::{Pixel, SkyOffset};
+use crate::units::Pixel;
 
 /// The strips of both sides, whole and in pieces.
 pub struct Strips {
@@ -82,11 +80,6 @@ impl Findings<'_> {
     fn core_is_unsure(&self) -> bool {
         self.model.core.confidence < LEAST_CORE_CONFIDENCE
     }
-}
-
-/// Offset of a side's end: its hot spot, else its ridge's last point.
-pub fn end_offset(ridge: &Ridge, features: &SideFeatures) -> Option<SkyOffset> {
-    features.hotspot.map(|h| h.offset).or_else(|| ridge.points.last().map(|p| p.offset))
 }
 
 /// The record of a map on which nothing was found.
@@ -221,13 +214,8 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         side.length_kpc = kpc;
     }
 
-    let peak = model
-        .peaks
-        .iter()
-        .map(|p| (p.value, p.signal_to_noise))
-        .fold((0.0, 0.0), |a, b| if b.0 > a.0 { b } else { a });
-    let peak = if peak.0 > 0.0 { peak } else { brightest_region(findings) };
-    let rms = if peak.1 > 0.0 { peak.0 / peak.1 } else { 0.0 };
+    let peak = model.peak;
+    let rms = if peak.signal_to_noise > 0.0 { peak.value / peak.signal_to_noise } else { 0.0 };
     let near = findings.strips.as_ref().and_then(|s| s.near_rms);
     let status = if unresolved { Status::Unresolved } else { Status::Measured };
     // In the map's own unit: a ratio needs no flux scale, and its error cancels.
@@ -242,11 +230,11 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         total_flux_density_mjy: total,
         contour_flux_density_mjy: whole(units.flux(sums.contour.value, sums.contour.sigma)),
         peak_brightness_mjy_per_beam: if map.saturated > 0 {
-            units.brightness(peak.0, rms).as_lower_limit(settings.confidence)
+            units.brightness(peak.value, rms).as_lower_limit(settings.confidence)
         } else {
-            units.brightness(peak.0, rms)
+            units.brightness(peak.value, rms)
         },
-        peak_signal_to_noise: Bare::number(peak.1, Because::NoNoiseEstimate),
+        peak_signal_to_noise: Bare::number(peak.signal_to_noise, Because::NoNoiseEstimate),
         contour_mjy_per_beam: units.bare_brightness(model.level),
         largest_angular_size_arcsec: las_arcsec,
         largest_angular_size_deconvolved_arcsec: units.arcsec(deconvolved),
@@ -289,7 +277,13 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         software: Software::default(),
         input: input_record(map),
         map: described(map),
-        noise: noise_record(observed, &units, core_px.unwrap_or(model.middle), Some(peak.0), near),
+        noise: noise_record(
+            observed,
+            &units,
+            core_px.unwrap_or(model.middle),
+            Some(peak.value),
+            near,
+        ),
         core: CoreRecord {
             position: OrMissing::from_option(core_px.map(|p| position(map, p)), Because::NoCore),
             position_error_arcsec: core_px.map_or(Bare::missing(Because::NoCore), |_| {

@@ -1,8 +1,9 @@
 //! Which side comes first in the record, and what the sides are called.
 
-use super::{Findings, MOST_BLANK, end_offset};
+use super::{Findings, MOST_BLANK};
 use crate::flags::{self, Flag};
 use crate::record::Role;
+use crate::source::sides::end_offset;
 use crate::units::{SkyOffset, wrap_difference_deg};
 
 /// Which of the model's sides comes first, and both roles.

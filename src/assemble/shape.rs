@@ -1,11 +1,11 @@
 //! Sizes, arms and the Fanaroff–Riley ratio of the whole source.
 
+use super::Findings;
 use super::sums::of_cut_sides;
-use super::{Findings, end_offset};
 use crate::extent::{Extent, feature_sigma, resolution_limit, widest_across};
 use crate::measurement::{Because, Measurement};
 use crate::record::ArmBasis;
-use crate::source::sides::BRIGHTEST_BEYOND_BEAMS;
+use crate::source::sides::{BRIGHTEST_BEYOND_BEAMS, end_offset};
 use crate::stats::normal_deviate;
 use crate::units::{Pixel, SkyOffset, wrap_difference_deg, wrap_undirected_deg};
 

@@ -1,15 +1,15 @@
 //! The record of one side.
 
+use super::Findings;
 use super::shape::end_sigma;
 use super::sums::Sums;
 use super::units::Units;
-use super::{Findings, end_offset};
 use crate::brightness::positive_upper_limit;
 use crate::extent::{Extent, FARTHEST_POINT, feature_sigma, position_sigma};
 use crate::measurement::{Bare, Because, Measurement, OrMissing};
 use crate::record::{HotspotRecord, JetRecord, LobeRecord, RidgePointRecord, Role, SideRecord};
 use crate::ridge::Ridge;
-use crate::source::sides::BRIGHTEST_BEYOND_BEAMS;
+use crate::source::sides::{BRIGHTEST_BEYOND_BEAMS, end_offset};
 use crate::units::{Pixel, wrap_difference_deg, wrap_directed_deg};
 
 pub(super) fn side_record(
@@ -80,7 +80,7 @@ pub(super) fn side_record(
     });
     let record_index = usize::from(matches!(role, Role::CounterJet | Role::Second));
     let lobe = lobe_record(findings, units, sums, (k, record_index), size);
-    let peak = model.peaks.first().map_or(1.0, |p| p.value);
+    let peak = model.peak.value;
     SideRecord {
         role,
         position_angle_deg: mean_bearing(findings, ridge, core_sigma),

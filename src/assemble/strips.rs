@@ -38,7 +38,7 @@ pub(super) fn brightness_record(
     };
     let pair = &strips.pair;
     let flux = |k: usize| units.flux_noise(pair.fluxes[k].sum, pair.variance[k].sqrt());
-    let peak = findings.model.peaks.first().map_or(1.0, |p| p.value);
+    let peak = findings.model.peak.value;
     let strip = strips.placed.strip;
     BrightnessRecord {
         jet_to_counter_jet_ratio: ratio_of(pair),

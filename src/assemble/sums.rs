@@ -1,11 +1,10 @@
 //! Fluxes of the parts of a source.
 
-use super::{Findings, end_offset};
+use super::Findings;
 use crate::brightness::{FluxPair, ratio};
 use crate::flux::{Sum, sum_where, widened};
 use crate::measurement::{Because, Measurement};
-use crate::regions::Region;
-use crate::source::sides::side_of;
+use crate::source::sides::{end_offset, side_of};
 use crate::units::SkyOffset;
 
 /// Sums over the parts of the source.
@@ -23,8 +22,7 @@ pub(super) struct Sums {
 
 pub(super) fn sum_parts(findings: &Findings, order: [usize; 2]) -> Sums {
     let Findings { map, observed, chosen, model, .. } = *findings;
-    let members: Vec<Region> =
-        chosen.members.iter().filter_map(|&k| observed.regions.get(k).cloned()).collect();
+    let members = chosen.of(&observed.regions);
     let beam = &observed.working_beam;
     let grow = beam.major / map.geometry.mean_scale();
     let inside = widened(&model.window, &members, map.columns, map.rows, grow);
@@ -94,18 +92,6 @@ pub(super) fn core_sum(findings: &Findings, sums: &Sums) -> Measurement {
         (None, Some(upper)) => Measurement::upper_limit(upper * area, findings.settings.confidence),
         (None, None) => Measurement::missing(Because::NoCore),
     }
-}
-
-pub(super) fn brightest_region(findings: &Findings) -> (f64, f64) {
-    findings
-        .chosen
-        .members
-        .iter()
-        .filter_map(|&k| findings.observed.regions.get(k))
-        .map(|r| {
-            (r.peak.value - findings.observed.noise.background(r.peak.x, r.peak.y), r.peak.snr)
-        })
-        .fold((0.0, 0.0), |a, b| if b.0 > a.0 { b } else { a })
 }
 
 /// Lobe flux of the record's first side over that of the second.

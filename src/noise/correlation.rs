@@ -74,7 +74,6 @@ pub struct NoiseCorrelation {
     kept: Vec<f64>,
     lags: Vec<(isize, isize, f64)>,
     sum: f64,
-    error: f64,
     kernel: Option<KernelEllipse>,
     samples: usize,
 }
@@ -102,8 +101,8 @@ impl NoiseCorrelation {
     /// `pairs` per lag (empty: exact values, everything is kept).
     fn from_measured(reach: usize, measured: Vec<f64>, pairs: &[f64], samples: usize) -> Self {
         let kernel = fit_kernel(reach, &measured);
-        let (kept, error) = if pairs.is_empty() {
-            (measured.clone(), 0.0)
+        let kept = if pairs.is_empty() {
+            measured.clone()
         } else {
             significant(reach, &measured, pairs, kernel)
         };
@@ -113,7 +112,7 @@ impl NoiseCorrelation {
             .filter(|((dx, dy), c)| (*dy, *dx) > (0, 0) && c.abs() > 0.0)
             .map(|((dx, dy), c)| (dx, dy, *c))
             .collect();
-        Self { reach, measured, kept, lags, sum, error, kernel, samples }
+        Self { reach, measured, kept, lags, sum, kernel, samples }
     }
 
     /// Largest lag measured, in pixels along x or y.
@@ -134,11 +133,6 @@ impl NoiseCorrelation {
     /// The coefficient used for variances (see the type's documentation).
     pub fn at(&self, dx: isize, dy: isize) -> f64 {
         lag_index(self.reach, dx, dy).and_then(|i| self.kept.get(i).copied()).unwrap_or(0.0)
-    }
-
-    /// Standard error of a far coefficient.
-    pub fn coefficient_error(&self) -> f64 {
-        self.error
     }
 
     /// Sum of the coefficients over all lags used: pixels per independent sample of a mean
@@ -318,7 +312,7 @@ impl Window {
             }
         }
         // Taking off the mean of N pixels lowers every coefficient by ΣC/N.
-        let (kept, _) = significant(reach, &values, &pairs, fit_kernel(reach, &values));
+        let kept = significant(reach, &values, &pairs, fit_kernel(reach, &values));
         let bias = (symmetric_sum(&kept) / self.usable as f64).clamp(0.0, 0.1);
         for value in &mut values {
             *value = (*value + bias) / (1.0 + bias);
@@ -389,13 +383,13 @@ fn joined(reach: usize, values: &[f64], threshold: impl Fn(usize) -> f64) -> Vec
     inside
 }
 
-/// The coefficients worth summing, and the error of a far one.
+/// The coefficients worth summing.
 fn significant(
     reach: usize,
     values: &[f64],
     pairs: &[f64],
     kernel: Option<KernelEllipse>,
-) -> (Vec<f64>, f64) {
+) -> Vec<f64> {
     let square = |inside: &[bool]| -> f64 {
         let kept: Vec<f64> =
             values.iter().zip(inside).filter(|(_, i)| **i).map(|(v, _)| v * v).collect();
@@ -450,8 +444,7 @@ fn significant(
             }
         }
     }
-    let nearest = lag_index(reach, 0, 0).map_or(0.0, error);
-    (kept, nearest)
+    kept
 }
 
 /// Weighted fit of −ln C = a dx² + 2 b dx dy + c dy².

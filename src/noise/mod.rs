@@ -18,7 +18,7 @@ mod tiles;
 
 pub use aperture::{ApertureScatter, ApertureWeights, aperture_scatter, structure_factor};
 pub use correlation::{CorrelationSettings, KernelEllipse, NoiseCorrelation, measure_correlation};
-pub use model::{Noise, Residual, SignalToNoise};
+pub use model::Noise;
 
 use schemars::JsonSchema;
 use serde::{Deserialize, Serialize};

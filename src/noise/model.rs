@@ -1,6 +1,6 @@
 //! The smooth model of background and rms over a map.
 
-use crate::grid::{Grid, PixelMask};
+use crate::grid::PixelMask;
 
 /// Background and rms as smooth functions of position: values on a grid of nodes (the
 /// tiles' centres and the map's edges), bilinear in between, constant outside the map.
@@ -127,53 +127,6 @@ fn bracket(nodes: &[f64], at: f64) -> (usize, f64) {
     let at = at.clamp(*first, *last);
     let i = nodes.partition_point(|node| *node <= at).clamp(1, nodes.len() - 1) - 1;
     (i, (at - nodes[i]) / (nodes[i + 1] - nodes[i]))
-}
-
-/// A map with its background taken away.
-#[derive(Clone, Copy)]
-pub struct Residual<'a> {
-    /// The map.
-    pub grid: &'a dyn Grid,
-    /// Its noise model.
-    pub noise: &'a Noise,
-}
-
-impl Grid for Residual<'_> {
-    fn rows(&self) -> usize {
-        self.grid.rows()
-    }
-
-    fn columns(&self) -> usize {
-        self.grid.columns()
-    }
-
-    fn value(&self, x: usize, y: usize) -> f64 {
-        self.grid.value(x, y) - self.noise.background(x as f64, y as f64)
-    }
-}
-
-/// A map in units of its local rms, background taken away.
-#[derive(Clone, Copy)]
-pub struct SignalToNoise<'a> {
-    /// The map.
-    pub grid: &'a dyn Grid,
-    /// Its noise model.
-    pub noise: &'a Noise,
-}
-
-impl Grid for SignalToNoise<'_> {
-    fn rows(&self) -> usize {
-        self.grid.rows()
-    }
-
-    fn columns(&self) -> usize {
-        self.grid.columns()
-    }
-
-    fn value(&self, x: usize, y: usize) -> f64 {
-        let (fx, fy) = (x as f64, y as f64);
-        (self.grid.value(x, y) - self.noise.background(fx, fy)) / self.noise.rms(fx, fy)
-    }
 }
 
 #[cfg(test)]

@@ -27,6 +27,13 @@ pub struct SourceRegions {
     pub chance: f64,
 }
 
+impl SourceRegions {
+    /// The regions themselves, out of the map's list.
+    pub fn of(&self, regions: &[Region]) -> Vec<Region> {
+        self.members.iter().filter_map(|&k| regions.get(k).cloned()).collect()
+    }
+}
+
 /// Chance pairs above which joining is refused where the region at the anchor is extended:
 /// it is then most likely the whole source.
 const CHANCE_WITH_EXTENDED: f64 = 0.001;

@@ -14,7 +14,7 @@ use crate::grid::Grid;
 use crate::map::beam::Beam;
 use crate::map::geometry::{LocalFrame, SkyGeometry};
 use crate::noise::{Noise, NoiseCorrelation};
-use crate::regions::{Region, local_maxima, region_mask};
+use crate::regions::{self, Region, local_maxima, region_mask};
 use crate::ridge::{Ridge, RidgeContext, trace_ridges};
 use crate::units::Pixel;
 use crate::window::Window;
@@ -73,6 +73,8 @@ pub struct SourceModel {
     pub ends: [Pixel; 2],
     /// Local maxima, brightest first.
     pub peaks: Vec<Peak>,
+    /// The highest of them; the regions' brightest pixel where none stands out.
+    pub peak: Peak,
     /// The core.
     pub core: Core,
     /// Local frame about the core, or about the flux-weighted middle.
@@ -89,8 +91,7 @@ const PEAK_SEPARATION_BEAMS: f64 = 0.7;
 /// Models the source; `None` where its contour has no extent (all its pixels fall below the
 /// contour level, a clipped map say).
 pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
-    let members: Vec<Region> =
-        input.chosen.members.iter().filter_map(|&k| input.regions.get(k).cloned()).collect();
+    let members = input.chosen.of(input.regions);
     let brightest = members.iter().max_by(|a, b| a.peak_snr.total_cmp(&b.peak_snr))?;
     let weight: f64 = members.iter().map(|r| r.sum).sum();
     let middle = Pixel::new(
@@ -129,12 +130,12 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
         input.outline_sigma + 1.0,
     )
     .into_iter()
-    .map(|p| Peak {
-        pixel: Pixel::new(p.x, p.y),
-        value: p.value - input.noise.background(p.x, p.y),
-        signal_to_noise: p.snr,
-    })
+    .map(|p| as_peak(p, |x, y| input.noise.background(x, y)))
     .collect();
+
+    let background = |x: f64, y: f64| input.noise.background(x, y);
+    let pixels: Vec<Peak> = members.iter().map(|r| as_peak(r.peak, background)).collect();
+    let brightest_pixel = highest(&pixels)?;
 
     let mut core = choose_core(
         &window,
@@ -178,12 +179,26 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
         cut_off: side_cut.contains(&true),
         side_cut,
         ends,
+        peak: highest(&peaks).unwrap_or(brightest_pixel),
         peaks,
         core,
         frame,
         middle,
         sides,
     })
+}
+
+/// A maximum of the map with the background taken off.
+fn as_peak(peak: regions::Peak, background: impl Fn(f64, f64) -> f64) -> Peak {
+    Peak {
+        pixel: Pixel::new(peak.x, peak.y),
+        value: peak.value - background(peak.x, peak.y),
+        signal_to_noise: peak.snr,
+    }
+}
+
+fn highest(peaks: &[Peak]) -> Option<Peak> {
+    peaks.iter().max_by(|a, b| a.value.total_cmp(&b.value)).copied()
 }
 
 /// A contour that is open this far out, as a share of the side's length, cuts the side off; a

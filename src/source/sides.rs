@@ -57,6 +57,11 @@ pub fn side_of(ridges: &[Ridge; 2], offset: SkyOffset) -> usize {
     usize::from(turn(&ridges[1]) < turn(&ridges[0]))
 }
 
+/// Offset of a side's end: its hot spot, else its ridge's last point.
+pub fn end_offset(ridge: &Ridge, features: &SideFeatures) -> Option<SkyOffset> {
+    features.hotspot.map(|h| h.offset).or_else(|| ridge.points.last().map(|p| p.offset))
+}
+
 /// Sorts peaks and contour points to the sides and picks each side's features. `level` is
 /// the contour's, map unit.
 pub fn find_features(

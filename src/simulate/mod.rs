@@ -5,6 +5,7 @@
 //! numbers come from a named generator, transcendental functions from `libm`, and sums run in
 //! a fixed order.
 
+pub mod parameters;
 pub mod scene;
 
 pub use scene::{Amount, GaussianComponent, GaussianShape, NoiseKind, Scene, jet, unit_noise};

@@ -3,6 +3,9 @@
 //! Position angles are degrees from north through east. A directed angle (a jet, a side)
 //! lies in [0, 360), an undirected one (an axis, a beam) in [0, 180), a difference in
 //! (−180, 180].
+//!
+//! Sines and roots of sums come from `libm`: made maps and records do not depend on the
+//! platform's mathematics library.
 
 use schemars::JsonSchema;
 use serde::{Deserialize, Serialize};
@@ -25,7 +28,7 @@ impl Pixel {
 
     /// Distance to another position in pixels.
     pub fn distance_px(self, other: Self) -> f64 {
-        (self.x - other.x).hypot(self.y - other.y)
+        libm::hypot(self.x - other.x, self.y - other.y)
     }
 }
 
@@ -46,18 +49,18 @@ impl SkyOffset {
 
     /// The offset of length `radius` in the direction `pa_deg` (north through east).
     pub fn polar(radius: f64, pa_deg: f64) -> Self {
-        let (sin, cos) = pa_deg.to_radians().sin_cos();
+        let (sin, cos) = libm::sincos(pa_deg.to_radians());
         Self { east: radius * sin, north: radius * cos }
     }
 
     /// Length of the offset.
     pub fn radius(self) -> f64 {
-        self.east.hypot(self.north)
+        libm::hypot(self.east, self.north)
     }
 
     /// Directed position angle in [0, 360); 0 for a zero offset.
     pub fn position_angle_deg(self) -> f64 {
-        wrap_directed_deg(self.east.atan2(self.north).to_degrees())
+        wrap_directed_deg(libm::atan2(self.east, self.north).to_degrees())
     }
 
     /// This offset minus another.

@@ -83,8 +83,8 @@ impl LocalFrame {
 
     /// Distance from a pixel's centre beyond which none of it lies, plane units.
     pub fn pixel_reach(&self) -> f64 {
-        let column = self.to_sky[0][0].hypot(self.to_sky[1][0]);
-        let row = self.to_sky[0][1].hypot(self.to_sky[1][1]);
+        let column = libm::hypot(self.to_sky[0][0], self.to_sky[1][0]);
+        let row = libm::hypot(self.to_sky[0][1], self.to_sky[1][1]);
         0.5 * (column + row)
     }
 
@@ -281,7 +281,7 @@ impl SkyGeometry {
         let length = (1.0 + xi * xi + eta * eta).sqrt();
         let (sin_0, cos_0) = sin_cos_deg(centre.dec_deg);
         let (sin, cos) = sin_cos_deg(position.dec_deg);
-        let (sin_ra, cos_ra) = xi.atan2(cos_0 - eta * sin_0).sin_cos();
+        let (sin_ra, cos_ra) = libm::sincos(libm::atan2(xi, cos_0 - eta * sin_0));
         // e₀ = (0, 1, 0), n₀ = (−sin δ₀, 0, cos δ₀); e and n at the pixel likewise.
         let turn = [
             [cos_ra / length, sin_ra * sin_0 / length],
@@ -292,7 +292,7 @@ impl SkyGeometry {
 }
 
 fn sin_cos_deg(angle_deg: f64) -> (f64, f64) {
-    angle_deg.to_radians().sin_cos()
+    libm::sincos(angle_deg.to_radians())
 }
 
 #[cfg(test)]

@@ -60,7 +60,7 @@ fn in_domain(beta: f64, viewing_angle_deg: f64) -> bool {
 
 /// 1 − β cos θ as (1 − β) + 2β sin²(θ/2): no digits lost at small angles and high speeds.
 fn one_minus_beta_cos(beta: f64, viewing_angle_deg: f64) -> f64 {
-    let half_sine = (0.5 * viewing_angle_deg).to_radians().sin();
+    let half_sine = libm::sin((0.5 * viewing_angle_deg).to_radians());
     (1.0 - beta) + 2.0 * beta * half_sine * half_sine
 }
 
@@ -71,7 +71,7 @@ fn one_plus_beta_cos(beta: f64, viewing_angle_deg: f64) -> f64 {
 
 /// sin θ, exactly 0 at 0° and 180°.
 fn sine(viewing_angle_deg: f64) -> f64 {
-    viewing_angle_deg.min(180.0 - viewing_angle_deg).to_radians().sin()
+    libm::sin(viewing_angle_deg.min(180.0 - viewing_angle_deg).to_radians())
 }
 
 /// Lorentz factor Γ = 1/√(1 − β²).
@@ -137,7 +137,7 @@ fn arccos_deg(cosine: f64, slack: f64) -> Option<f64> {
 /// Urry & Padovani 1995, appendix A.
 pub fn jet_to_counter_jet_ratio(beta: f64, viewing_angle_deg: f64, exponent: f64) -> Option<f64> {
     let arms = arm_length_ratio(beta, viewing_angle_deg)?;
-    finite(arms.powf(exponent))
+    finite(libm::pow(arms, exponent))
 }
 
 /// β cos θ = (R^(1/p) − 1)/(R^(1/p) + 1) = tanh(ln R/2p).

@@ -165,7 +165,10 @@ impl Cosmology {
 
     /// ∫ dz/E as ∫ x/E du with x = 1 + z = eᵘ: smooth over any range of redshift.
     fn comoving_integral(&self, redshift: f64) -> f64 {
-        integrate(|u| u.exp() / self.expansion_squared(u.exp()).sqrt(), redshift.ln_1p())
+        integrate(
+            |u| libm::exp(u) / self.expansion_squared(libm::exp(u)).sqrt(),
+            libm::log1p(redshift),
+        )
     }
 
     /// Transverse comoving distance D_M in Mpc (the proper-motion distance).
@@ -181,12 +184,12 @@ impl Cosmology {
         let curvature = self.omega_curvature();
         let root = curvature.abs().sqrt();
         let bent = if curvature > 0.0 {
-            (root * integral).sinh() / root
+            libm::sinh(root * integral) / root
         } else if curvature < 0.0 {
             if root * integral >= PI {
                 return Err(CosmologyError::BeyondAntipode(redshift));
             }
-            (root * integral).sin() / root
+            libm::sin(root * integral) / root
         } else {
             integral
         };
@@ -225,7 +228,7 @@ impl Cosmology {
     pub fn lookback_time_gyr(&self, redshift: f64) -> Result<f64, CosmologyError> {
         self.check_redshift(redshift)?;
         let integral =
-            integrate(|u| 1.0 / self.expansion_squared(u.exp()).sqrt(), redshift.ln_1p());
+            integrate(|u| 1.0 / self.expansion_squared(libm::exp(u)).sqrt(), libm::log1p(redshift));
         Ok(integral * KM_PER_MPC / self.hubble_km_s_mpc / (SECONDS_PER_YEAR * 1e9))
     }
 }

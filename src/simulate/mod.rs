@@ -5,7 +5,15 @@
 //! numbers come from a named generator, transcendental functions from `libm`, and sums run in
 //! a fixed order.
 
+pub mod noise;
+pub mod observe;
 pub mod parameters;
 pub mod scene;
+pub mod source;
+pub mod truth;
 
-pub use scene::{Amount, GaussianComponent, GaussianShape, NoiseKind, Scene, jet, unit_noise};
+pub use scene::{
+    Amount, GaussianComponent, GaussianShape, NoiseKind, Scene, add_gaussian, jet, unit_noise,
+};
+#[cfg(test)]
+mod tests;

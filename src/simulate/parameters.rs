@@ -193,6 +193,8 @@ parameters! {
         position_angle_deg: number(range: ANY, default: 90.0) "position angle of the approaching jet where it leaves the core";
         redshift: optional(range: Range::open_below(0.0, 20.0)) "redshift";
         distance_mpc: optional(range: Range::open_below(0.0, 1e6)) "distance of a nearby source; replaces the redshift's";
+        ra_deg: number(range: Range::open_above(0.0, 360.0), default: 150.0) "right ascension of the core";
+        dec_deg: number(range: Range::closed(-90.0, 90.0), default: 20.0) "declination of the core";
     }
     core: Core "The compact core: the innermost flow on both sides." {
         flux_density_mjy: optional(range: Range::open_above(0.0, f64::INFINITY)) "flux density as observed";
@@ -251,6 +253,7 @@ parameters! {
         length_share: number(range: Range::open_below(0.0, 1.0), default: 0.4) "reach back from the end, as a share of the arm";
         width_arcsec: number(range: Range::open_above(0.0, f64::INFINITY), default: 10.0) "FWHM across";
         spectral_index: number(range: ANY, default: 0.8) "of lobes, hot spots, plumes, bridge and halo";
+        texture: number(range: Range::closed(0.0, 1.0), default: 0.5) "irregularity of lobes, plumes and bridge; 0: smooth";
     }
     bridge: Bridge "Faint emission between the ends, over the core." {
         flux_density_mjy: number(range: Range::open_above(0.0, f64::INFINITY), default: 0.0) "flux density";
@@ -290,8 +293,6 @@ parameters! {
         offset_x_px: number(range: ANY, default: 0.0) "core from the array's middle, columns";
         offset_y_px: number(range: ANY, default: 0.0) "core from the array's middle, rows as stored";
         frequency_ghz: number(range: Range::open(0.0, f64::INFINITY), default: 1.4) "frequency";
-        centre_ra_deg: number(range: Range::open_above(0.0, 360.0), default: 150.0) "right ascension of the array's middle";
-        centre_dec_deg: number(range: Range::closed(-90.0, 90.0), default: 20.0) "declination of the array's middle";
         host: word(words: "known", "unknown") "whether the description gives the host's place";
         host_error_arcsec: number(range: Range::open_above(0.0, f64::INFINITY), default: 0.0) "1 sigma per axis by which the host given is off the core";
         describe: word(words: "full", "plain") "plain leaves redshift and spectral indices out of the description";
@@ -313,6 +314,7 @@ parameters! {
         bowl: number(range: Range::closed(0.0, 1.0), default: 0.0) "negative flux around the source over its total flux";
         bowl_fwhm_arcsec: number(range: Range::open(0.0, f64::INFINITY), default: 120.0) "FWHM of that bowl";
         offset_mjy_per_beam: number(range: ANY, default: 0.0) "brightness added everywhere";
+        flux_scale_error: number(range: Range::closed(0.0, 0.5), default: 0.0) "1 sigma of the calibration's factor, drawn for each map";
     }
     neighbours: Neighbours "Unrelated point sources." {
         per_square_arcmin: number(range: Range::closed(0.0, 1000.0), default: 0.0) "their density";

@@ -1,0 +1,367 @@
+//! Made maps of the built-in scenarios, measured and held against their truth: number by
+//! number how often it is given, how far it is off in its own errors, and how often its
+//! intervals and limits hold.
+//!
+//! `JETSPAN_MAPS=200 cargo test --release calibration -- --nocapture` prints the whole table;
+//! without it a few maps of each scenario show that truth and record speak of the same things.
+
+use std::collections::BTreeMap;
+
+use jetspan::map::SkyMap;
+use jetspan::map::description::{Layer, Origin, resolve};
+use jetspan::map::read::{Samples, StoredArray};
+use jetspan::pipeline::{MapName, measure};
+use jetspan::record::{MapRecord, Role};
+use jetspan::settings::Settings;
+use jetspan::simulate::{Aperture, Made, MadeMap, Scenario, Truth};
+use jetspan::units::{wrap_difference_deg, wrap_directed_deg};
+use serde_json::Value;
+
+/// The record of a made map.
+pub fn measured(map: &MadeMap, settings: &Settings) -> MapRecord {
+    let (rows, columns) = map.brightness.dim();
+    let stored = StoredArray {
+        samples: Samples::F32(map.brightness.iter().map(|&v| v as f32).collect()),
+        rows,
+        columns,
+        format: "npy",
+        dtype: "float32".to_owned(),
+        shape: vec![rows as u64, columns as u64],
+        sha256: String::new(),
+    };
+    let text = Value::Object(map.description.clone()).to_string();
+    let layer = Layer::from_json_text(&text, Origin::Sidecar, "made").expect("a description");
+    let description = resolve(vec![layer]).expect("consistent description");
+    let map = SkyMap::from_stored(stored, description).expect("a map");
+    let name = MapName { id: "made".to_owned(), file: "made.npy".to_owned() };
+    measure(&map, &name, settings).expect("a record")
+}
+
+/// How a quantity is compared.
+#[derive(Clone, Copy, PartialEq)]
+enum Scale {
+    /// As it is.
+    Plain,
+    /// Position angles: differences wrap at 360°.
+    Directed,
+    /// Undirected position angles: differences wrap at 180°.
+    Undirected,
+}
+
+/// What becomes of a quantity when the record's sides are the other way round.
+#[derive(Clone, Copy, PartialEq)]
+enum Swap {
+    Nothing,
+    /// The truth is turned upside down.
+    Invert,
+    /// The truth changes its sign.
+    Negate,
+}
+
+/// Numbers of the whole source that have a truth.
+const WHOLE: &[(&str, Scale, Swap)] = &[
+    ("core.flux_density_mjy", Scale::Plain, Swap::Nothing),
+    ("source.total_flux_density_mjy", Scale::Plain, Swap::Nothing),
+    ("source.contour_flux_density_mjy", Scale::Plain, Swap::Nothing),
+    ("source.peak_brightness_mjy_per_beam", Scale::Plain, Swap::Nothing),
+    ("source.largest_angular_size_arcsec", Scale::Plain, Swap::Nothing),
+    ("source.largest_angular_size_deconvolved_arcsec", Scale::Plain, Swap::Nothing),
+    ("source.component_separation_arcsec", Scale::Plain, Swap::Nothing),
+    ("source.position_angle_deg", Scale::Undirected, Swap::Nothing),
+    ("source.hotspot_separation_arcsec", Scale::Plain, Swap::Nothing),
+    ("source.fr_ratio", Scale::Plain, Swap::Nothing),
+    ("source.fr_ratio_deconvolved", Scale::Plain, Swap::Nothing),
+    ("source.arm_length_ratio", Scale::Plain, Swap::Nothing),
+    ("source.arm_length_ratio_jet_side", Scale::Plain, Swap::Invert),
+    ("source.lobe_flux_ratio", Scale::Plain, Swap::Invert),
+    ("source.misalignment_deg", Scale::Directed, Swap::Negate),
+    ("source.bend_deg", Scale::Plain, Swap::Nothing),
+    ("source.axial_ratio", Scale::Plain, Swap::Nothing),
+    ("source.core_prominence", Scale::Plain, Swap::Nothing),
+    ("source.core_prominence_rest", Scale::Plain, Swap::Nothing),
+    ("brightness.jet_to_counter_jet_ratio", Scale::Plain, Swap::Invert),
+    ("brightness.jet_flux_density_mjy", Scale::Plain, Swap::Nothing),
+    ("brightness.counter_jet_flux_density_mjy", Scale::Plain, Swap::Nothing),
+    ("physics.projected_length_kpc", Scale::Plain, Swap::Nothing),
+    ("physics.luminosity_w_per_hz", Scale::Plain, Swap::Nothing),
+    ("physics.core_luminosity_w_per_hz", Scale::Plain, Swap::Nothing),
+    ("physics.beaming.beta_cos_theta", Scale::Plain, Swap::Negate),
+];
+
+/// Numbers of a side that have a truth; both sides are counted together.
+const SIDE: &[(&str, Scale)] = &[
+    ("position_angle_deg", Scale::Directed),
+    ("inner_position_angle_deg", Scale::Directed),
+    ("end_position_angle_deg", Scale::Directed),
+    ("bend_deg", Scale::Directed),
+    ("length_arcsec", Scale::Plain),
+    ("ridge_length_arcsec", Scale::Plain),
+    ("length_kpc", Scale::Plain),
+    ("flux_density_mjy", Scale::Plain),
+    ("fr_ratio", Scale::Plain),
+    ("jet.flux_density_mjy", Scale::Plain),
+    ("jet.opening_angle_deg", Scale::Plain),
+    ("hotspot.distance_arcsec", Scale::Plain),
+    ("hotspot.position_angle_deg", Scale::Directed),
+    ("hotspot.peak_brightness_mjy_per_beam", Scale::Plain),
+    ("lobe.flux_density_mjy", Scale::Plain),
+];
+
+/// What was seen of one quantity.
+#[derive(Default)]
+struct Tally {
+    asked: usize,
+    pulls: Vec<f64>,
+    in68: usize,
+    in95: usize,
+    limits: usize,
+    limits_true: usize,
+    reasons: BTreeMap<String, usize>,
+}
+
+impl Tally {
+    fn add(&mut self, measured: &Value, truth: f64, scale: Scale) {
+        self.asked += 1;
+        let number = |key: &str| measured.get(key).and_then(Value::as_f64);
+        if let (Some(value), Some(minus), Some(plus)) =
+            (number("value"), number("minus"), number("plus"))
+        {
+            let off = match scale {
+                Scale::Plain => value - truth,
+                Scale::Directed => wrap_difference_deg(value - truth),
+                Scale::Undirected => 0.5 * wrap_difference_deg(2.0 * (value - truth)),
+            };
+            let sigma = if off > 0.0 { minus } else { plus };
+            self.pulls.push(off / sigma.max(1e-300));
+            self.in68 += usize::from(off.abs() <= sigma);
+            let inside = match measured.get("ci95").and_then(Value::as_array).map(Vec::as_slice) {
+                Some([low, high]) => {
+                    let low = low.as_f64().unwrap_or(f64::NAN);
+                    low <= truth && truth <= high.as_f64().unwrap_or(f64::NAN)
+                }
+                _ => off.abs() <= 1.96 * sigma,
+            };
+            self.in95 += usize::from(inside);
+        } else if let Some(bound) = number("lower_limit") {
+            self.limits += 1;
+            self.limits_true += usize::from(truth >= bound);
+        } else if let Some(bound) = number("upper_limit") {
+            self.limits += 1;
+            self.limits_true += usize::from(truth <= bound);
+        } else {
+            let reason = measured.get("missing").and_then(Value::as_str).unwrap_or("absent");
+            *self.reasons.entry(reason.to_owned()).or_default() += 1;
+        }
+    }
+
+    fn row(&mut self, path: &str) -> String {
+        let n = self.asked as f64;
+        let values = self.pulls.len();
+        let share = |count: usize, of: usize| {
+            if of == 0 { "   -".to_owned() } else { format!("{:4.2}", count as f64 / of as f64) }
+        };
+        self.pulls.sort_by(f64::total_cmp);
+        let at = |q: f64| {
+            let place = (q * (values.max(1) - 1) as f64).round() as usize;
+            self.pulls.get(place).copied().unwrap_or(f64::NAN)
+        };
+        let (median, width) = (at(0.5), 0.5 * (at(0.841) - at(0.159)));
+        let dash = |v: f64| if v.is_nan() { "     -".to_owned() } else { format!("{v:6.2}") };
+        let reason = self
+            .reasons
+            .iter()
+            .max_by_key(|(_, count)| **count)
+            .map_or(String::new(), |(reason, count)| format!("{reason} {count}"));
+        format!(
+            "{path:50} {:5} {:4.2} {:4.2}  {} {}  {} {}  {}  {reason}\n",
+            self.asked,
+            values as f64 / n.max(1.0),
+            self.limits as f64 / n.max(1.0),
+            dash(median),
+            dash(width),
+            share(self.in68, values),
+            share(self.in95, values),
+            share(self.limits_true, self.limits),
+        )
+    }
+}
+
+const HEAD: &str = "quantity                                               N  val  lim  median  width  c68  c95  limits true\n";
+
+/// The tallies of one scenario.
+#[derive(Default)]
+pub struct Score {
+    maps: usize,
+    statuses: BTreeMap<String, usize>,
+    tallies: BTreeMap<String, Tally>,
+    /// Core more than a beam off.
+    pub wrong_core: usize,
+    /// Sides called jet and counter-jet the wrong way round.
+    pub swapped: usize,
+    /// Sides called jet and counter-jet at all.
+    pub decided: usize,
+    /// A source where there is none.
+    pub detections: usize,
+}
+
+impl Score {
+    /// Adds one map.
+    pub fn add(&mut self, record: &MapRecord, truth: &Truth) {
+        let json = serde_json::to_value(record).expect("a record");
+        self.maps += 1;
+        let status = json["status"].as_str().expect("a status").to_owned();
+        self.detections += usize::from(status != "no-detection");
+        *self.statuses.entry(status).or_default() += 1;
+        let at = |path: &str| {
+            let mut value = &json;
+            for key in path.split('.') {
+                value = match key.parse::<usize>() {
+                    Ok(index) => &value[index],
+                    Err(_) => &value[key],
+                };
+            }
+            value
+        };
+        if truth.source.parts.is_empty() {
+            return;
+        }
+        let beam = truth.observation.beam.major / truth.observation.frame.mean_scale();
+        let position = at("core.position");
+        if let (Some(x), Some(y)) = (position["x_px"].as_f64(), position["y_px"].as_f64()) {
+            let origin = truth.observation.frame.origin;
+            if (x - origin.x).hypot(y - origin.y) > beam {
+                self.wrong_core += 1;
+                return;
+            }
+            let scale = truth.observation.frame.mean_scale();
+            let sigma = at("core.position_error_arcsec").as_f64().unwrap_or(f64::NAN);
+            for (off, axis) in [(x - origin.x, "x"), (y - origin.y, "y")] {
+                let value = serde_json::json!({"value": off * scale, "minus": sigma, "plus": sigma});
+                let path = format!("core.position ({axis})");
+                self.tallies.entry(path).or_default().add(&value, 0.0, Scale::Plain);
+            }
+        }
+        let swapped = self.is_swapped(record, truth, &json);
+        if swapped && record.sides[0].role == Role::Jet {
+            self.swapped += 1;
+            return;
+        }
+        self.decided += usize::from(record.sides[0].role == Role::Jet);
+        let own = self.own_strip(truth, at("brightness.aperture"), swapped);
+        for &(path, scale, swap) in WHOLE {
+            let by_strip = own.get(path).copied();
+            let Some(true_value) = by_strip.or_else(|| truth.values.get(path)) else { continue };
+            let true_value = match swap {
+                Swap::Invert if swapped && by_strip.is_none() => 1.0 / true_value,
+                Swap::Negate if swapped => -true_value,
+                _ => true_value,
+            };
+            self.tallies.entry(path.to_owned()).or_default().add(at(path), true_value, scale);
+        }
+        for index in [0, 1] {
+            for &(name, scale) in SIDE {
+                let path = format!("sides.{index}.{name}");
+                let true_index = if swapped { 1 - index } else { index };
+                let by_strip = own.get(path.as_str()).copied();
+                let true_path = format!("sides.{true_index}.{name}");
+                let Some(true_value) = by_strip.or_else(|| truth.values.get(&true_path)) else {
+                    continue;
+                };
+                let tally = self.tallies.entry(format!("sides.{name}")).or_default();
+                tally.add(at(&path), true_value, scale);
+            }
+        }
+    }
+
+    /// Whether the record's first side is the truth's second.
+    fn is_swapped(&self, record: &MapRecord, truth: &Truth, json: &Value) -> bool {
+        let side = json["sides"].as_array().and_then(|sides| {
+            sides.iter().enumerate().find_map(|(index, side)| {
+                Some((index, side["end_position_angle_deg"]["value"].as_f64()?))
+            })
+        });
+        let Some((index, pa)) = side else { return false };
+        let pa = if index == 0 { pa } else { wrap_directed_deg(pa + 180.0) };
+        let _ = record;
+        let towards = |k: usize| {
+            let end = truth.values.get(&format!("sides.{k}.end_position_angle_deg"));
+            end.map(|end| wrap_difference_deg(pa - end).abs())
+        };
+        match (towards(0), towards(1)) {
+            (Some(a), Some(b)) => b < a,
+            (Some(a), None) => a > 90.0,
+            (None, Some(b)) => b < 90.0,
+            (None, None) => false,
+        }
+    }
+
+    /// The truth of what hangs on the strip, for the record's own strip and order.
+    fn own_strip(&self, truth: &Truth, aperture: &Value, swapped: bool) -> BTreeMap<&str, f64> {
+        let number = |key: &str| aperture[key].as_f64();
+        let (Some(inner_arcsec), Some(outer_arcsec), Some(half_width_arcsec)) =
+            (number("inner_arcsec"), number("outer_arcsec"), number("half_width_arcsec"))
+        else {
+            return BTreeMap::new();
+        };
+        let aperture = Aperture { inner_arcsec, outer_arcsec, half_width_arcsec };
+        let mut fluxes = truth.strip_fluxes_mjy(&aperture);
+        let edge = outer_arcsec + truth.observation.beam.major;
+        let mut lobes = [0, 1].map(|index| truth.flux_beyond_mjy(index, edge));
+        if swapped {
+            fluxes.swap(0, 1);
+            lobes.swap(0, 1);
+        }
+        BTreeMap::from([
+            ("brightness.jet_flux_density_mjy", fluxes[0]),
+            ("brightness.counter_jet_flux_density_mjy", fluxes[1]),
+            ("brightness.jet_to_counter_jet_ratio", fluxes[0] / fluxes[1]),
+            ("sides.0.jet.flux_density_mjy", fluxes[0]),
+            ("sides.1.jet.flux_density_mjy", fluxes[1]),
+            ("sides.0.lobe.flux_density_mjy", lobes[0]),
+            ("sides.1.lobe.flux_density_mjy", lobes[1]),
+            ("source.lobe_flux_ratio", lobes[0] / lobes[1]),
+        ])
+    }
+
+    /// The table as text.
+    pub fn table(&mut self, name: &str) -> String {
+        let statuses: Vec<String> =
+            self.statuses.iter().map(|(status, count)| format!("{count} {status}")).collect();
+        let mut text = format!(
+            "\n{name}: {} maps ({}); wrong core {}, roles decided {}, sides swapped {}\n",
+            self.maps,
+            statuses.join(", "),
+            self.wrong_core,
+            self.decided,
+            self.swapped
+        );
+        if !self.tallies.is_empty() {
+            text.push_str(HEAD);
+        }
+        for (path, tally) in &mut self.tallies {
+            text.push_str(&tally.row(path));
+        }
+        text
+    }
+}
+
+/// Maps of a scenario to measure.
+fn maps(default: usize) -> usize {
+    std::env::var("JETSPAN_MAPS").ok().and_then(|n| n.parse().ok()).unwrap_or(default)
+}
+
+#[test]
+fn calibration_of_the_built_in_scenarios() {
+    let settings = Settings::default();
+    for (name, _) in Scenario::names() {
+        let scenario = Scenario::named(name).expect("a built-in scenario").expect("valid");
+        let mut score = Score::default();
+        for index in 0..maps(4) {
+            for Made { map, .. } in scenario.make(index).expect("a map") {
+                score.add(&measured(&map, &settings), &map.truth);
+            }
+        }
+        eprint!("{}", score.table(name));
+        assert!(score.maps > 0);
+    }
+}

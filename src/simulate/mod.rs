@@ -5,6 +5,8 @@
 //! numbers come from a named generator, transcendental functions from `libm`, and sums run in
 //! a fixed order.
 
+pub mod made;
 pub mod scene;
 
+pub use made::{ByteOrder, Dtype, FileFormat, Format, Made, Scenario, ScenarioError};
 pub use scene::{Amount, GaussianComponent, GaussianShape, NoiseKind, Scene, jet, unit_noise};

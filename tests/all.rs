@@ -7,6 +7,7 @@ mod hostile;
 mod invariance;
 mod published;
 mod schema;
+mod simulate;
 mod support;
 mod survey;
 mod truth;

@@ -32,9 +32,32 @@ Examples:
 Exit status: 0 all maps measured (also where nothing was found), 1 some map failed,
 2 the call was wrong or its output could not be written.";
 
+const SIMULATE_HELP: &str = "\
+Makes maps of sources whose truth is known: what a scenario describes, seen through a beam \
+and noise. Use them to learn how well a measurement recovers what was put in, or to plan \
+an observation. Every map comes with its description, so that it can be measured as it is; \
+the truth stands apart, so that no measurement sees it.
+
+The folder holds the maps, NAME.map.json beside each, manifest.csv (all maps), truth.jsonl \
+(what is true, a line a map) and scenario.toml, from which the same folder can be made \
+again. It appears whole or not at all. The same scenario and seed give the same bytes on \
+every machine and with any number of threads.";
+
+const SIMULATE_EXAMPLES: &str = "\
+Examples:
+  Ten maps of a built-in scenario, measured:
+    jetspan simulate bright-double --out made --count 10
+    jetspan measure --manifest made/manifest.csv --json made.jsonl
+  The same scenario changed by hand, with other noise:
+    jetspan simulate my-double.toml --out mine --seed 7
+
+Exit status: 0 all written, 2 the call or the scenario was wrong or the folder
+could not be written.";
+
 const EXAMPLES: &str = "\
 Examples:
   jetspan measure lantern-double.npy
+  jetspan simulate bright-double --out made
   jetspan explain jet_to_counter_jet_ratio
   jetspan schema record
 `jetspan measure --help` says what a map may be and how it is described.";
@@ -58,6 +81,9 @@ Examples:
   jetspan schema record > record.schema.json
   jetspan schema description";
 
+/// Most sources of one scenario.
+const MAX_COUNT: u64 = 10_000_000;
+
 /// The whole command line.
 pub fn command() -> Command {
     Command::new("jetspan")
@@ -69,6 +95,7 @@ pub fn command() -> Command {
         .max_term_width(80)
         .after_long_help(EXAMPLES)
         .subcommand(measure_command())
+        .subcommand(simulate_command())
         .subcommand(
             Command::new("explain")
                 .about("Says what a quantity of the record means, with unit, formula and source")
@@ -172,6 +199,57 @@ fn measure_command() -> Command {
         command = command.arg(arg);
     }
     command
+}
+
+fn simulate_command() -> Command {
+    let whole = |id: &'static str, range: std::ops::RangeInclusive<u64>| {
+        Arg::new(id).long(id).value_name("N").value_parser(value_parser!(u64).range(range))
+    };
+    Command::new("simulate")
+        .about("Makes maps with known truth: a folder of maps, descriptions and truth")
+        .override_usage("jetspan simulate <SCENARIO> --out <DIR> [OPTIONS]\n       jetspan simulate --list")
+        .long_about(SIMULATE_HELP)
+        .after_long_help(SIMULATE_EXAMPLES)
+        .arg(
+            Arg::new("SCENARIO")
+                .required_unless_present("list")
+                .value_parser(value_parser!(PathBuf))
+                .help("scenario file (TOML), - for standard input, or a built-in name")
+                .long_help("A scenario: a TOML file, - for standard input, or the name of a built-in scenario. Where there is a file of that name, the file is taken."),
+        )
+        .arg(
+            Arg::new("out")
+                .long("out")
+                .value_name("DIR")
+                .required_unless_present("list")
+                .value_parser(value_parser!(PathBuf))
+                .help("new folder for the maps")
+                .long_help("The folder to make, inside one that exists. A folder with something in it is never touched: a mixture of two samples would be measured as one."),
+        )
+        .arg(
+            whole("count", 1..=MAX_COUNT)
+                .help("number of sources [the scenario's]")
+                .long_help("How many sources are made; a source has a map at each of its epochs. The first ones stay the same when more are made. Default: the scenario's count."),
+        )
+        .arg(
+            // A TOML file holds whole numbers up to this one, and scenario.toml holds the seed.
+            whole("seed", 0..=i64::MAX.unsigned_abs())
+                .help("seed of everything random [the scenario's]")
+                .long_help("Another seed gives other noise and other draws from the same distributions. Default: the scenario's seed."),
+        )
+        .arg(
+            whole("threads", 1..=1024)
+                .help("threads used [the machine's]")
+                .long_help("Maps made at the same time; fewer need less memory. The bytes written do not depend on it. Default: as many as the machine has."),
+        )
+        .arg(
+            Arg::new("list")
+                .long("list")
+                .action(ArgAction::SetTrue)
+                .exclusive(true)
+                .help("list the built-in scenarios and end")
+                .long_help("Prints the name of every built-in scenario with a line about it, and makes nothing."),
+        )
 }
 
 fn number(

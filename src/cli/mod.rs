@@ -5,8 +5,10 @@ mod args;
 mod explain;
 mod measure;
 mod messages;
+mod simulate;
 
 use std::ffi::OsString;
+use std::path::PathBuf;
 use std::process::ExitCode;
 
 use clap::error::ErrorKind;
@@ -29,6 +31,7 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     };
     let outcome = match matches.subcommand() {
         Some(("measure", matches)) => measure::run(matches),
+        Some(("simulate", matches)) => simulate::run(matches),
         Some(("explain", matches)) => explain::run(matches),
         Some(("schema", matches)) => schema(matches),
         _ => Ok(ALL_MEASURED),
@@ -104,6 +107,20 @@ enum CliError {
         "no quantity, flag or description key is called `{found}`{near}; `jetspan explain` lists the quantities"
     )]
     UnknownQuantity { found: String, near: String },
+    #[error(transparent)]
+    Scenario(#[from] crate::simulate::ScenarioError),
+    #[error(
+        "cannot read the scenario {}: {reason}; name a TOML file, - for standard input, or a built-in scenario (--list shows them)", path.display()
+    )]
+    ScenarioFile { path: PathBuf, reason: String },
+    #[error(
+        "there is no scenario file `{found}` and no built-in scenario of that name{near}; built in are {names}"
+    )]
+    UnknownScenario { found: String, near: String, names: String },
+    #[error("cannot store the map {name}: {error}")]
+    Encode { name: String, error: crate::write::encode::EncodeError },
+    #[error("cannot start {threads} threads: {reason}; give a lower number as --threads")]
+    Threads { threads: usize, reason: String },
 }
 
 fn schema(matches: &clap::ArgMatches) -> Result<u8, CliError> {

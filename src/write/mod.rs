@@ -1,5 +1,7 @@
-//! Results for people and programs: records in, text out.
+//! Results for people and programs: records in, text out; made maps in, a folder of files out.
 
+pub mod encode;
+pub mod folder;
 pub mod json;
 pub mod number;
 pub mod table;
@@ -8,6 +10,11 @@ use std::io::{ErrorKind, Write};
 use std::path::{Path, PathBuf};
 
 use tempfile::NamedTempFile;
+
+/// How the name of an unfinished file or folder begins.
+const PART_PREFIX: &str = ".jetspan-";
+/// How it ends.
+const PART_SUFFIX: &str = ".part";
 
 /// Why a result could not be written.
 #[derive(Debug, thiserror::Error)]
@@ -19,6 +26,24 @@ pub enum WriteError {
         path: PathBuf,
         /// The system's reason.
         reason: String,
+    },
+    /// A folder cannot be made or filled.
+    #[error("cannot make the folder {}: {reason}; name a new folder inside one that exists and may be written to", path.display())]
+    Folder {
+        /// The folder.
+        path: PathBuf,
+        /// What is in the way.
+        reason: String,
+    },
+    /// Two files of a folder have one name, or a name is a path.
+    #[error("a file in {} cannot be called {name:?}: {reason}; give every map a name of its own", path.display())]
+    FileName {
+        /// The folder.
+        path: PathBuf,
+        /// The name.
+        name: String,
+        /// What is wrong with it.
+        reason: &'static str,
     },
     /// The target is one of the files read.
     #[error("{} is read by this call; name another file for the output", path.display())]
@@ -77,11 +102,7 @@ impl Target {
         }
         // A link is written through: its target is what gets replaced.
         let real = path.canonicalize().unwrap_or_else(|_| path.to_path_buf());
-        let folder = match real.parent() {
-            Some(parent) if !parent.as_os_str().is_empty() => parent.to_path_buf(),
-            _ => PathBuf::from("."),
-        };
-        let file = new_file_in(&folder).map_err(|e| fail(e.to_string()))?;
+        let file = new_file_in(folder_around(&real)).map_err(|e| fail(e.to_string()))?;
         Ok(Self { path: real, sink: Sink::Replacing(file) })
     }
 
@@ -120,10 +141,15 @@ impl Target {
     }
 }
 
+/// The folder that holds this path.
+fn folder_around(path: &Path) -> &Path {
+    path.parent().filter(|parent| !parent.as_os_str().is_empty()).unwrap_or(Path::new("."))
+}
+
 /// A file beside the target, with the permissions of an ordinary new file.
 fn new_file_in(folder: &Path) -> std::io::Result<NamedTempFile> {
     let mut builder = tempfile::Builder::new();
-    builder.prefix(".jetspan-").suffix(".part");
+    builder.prefix(PART_PREFIX).suffix(PART_SUFFIX);
     #[cfg(unix)]
     {
         use std::os::unix::fs::PermissionsExt;

@@ -1,6 +1,7 @@
 //! Integration tests, in one binary.
 #![allow(clippy::panic, reason = "helpers of tests stand outside the test functions")]
 
+mod calibration;
 mod cli;
 mod demo;
 mod hostile;

@@ -236,7 +236,8 @@ impl Score {
             let scale = truth.observation.frame.mean_scale();
             let sigma = at("core.position_error_arcsec").as_f64().unwrap_or(f64::NAN);
             for (off, axis) in [(x - origin.x, "x"), (y - origin.y, "y")] {
-                let value = serde_json::json!({"value": off * scale, "minus": sigma, "plus": sigma});
+                let value =
+                    serde_json::json!({"value": off * scale, "minus": sigma, "plus": sigma});
                 let path = format!("core.position ({axis})");
                 self.tallies.entry(path).or_default().add(&value, 0.0, Scale::Plain);
             }

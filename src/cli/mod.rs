@@ -109,6 +109,8 @@ enum CliError {
     UnknownQuantity { found: String, near: String },
     #[error(transparent)]
     Scenario(#[from] crate::simulate::ScenarioError),
+    #[error(transparent)]
+    Make(#[from] crate::simulate::MakeError),
     #[error(
         "cannot read the scenario {}: {reason}; name a TOML file, - for standard input, or a built-in scenario (--list shows them)", path.display()
     )]

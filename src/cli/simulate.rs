@@ -11,7 +11,7 @@ use serde_json::{Map, Value};
 
 use super::{ALL_MEASURED, CliError, messages};
 use crate::map::description::{nearest, sidecar_path};
-use crate::simulate::{Made, Scenario};
+use crate::simulate::{Made, MadeMap, Scenario};
 use crate::write::encode::{description_of, encode, extension};
 use crate::write::folder::{Folder, FolderFile};
 use crate::write::{WriteError, print};
@@ -156,7 +156,8 @@ impl Ready {
     }
 
     fn new(made: Made) -> Result<Self, CliError> {
-        let Made { name, brightness, mut description, truth, file: format } = made;
+        let Made { name, map } = made;
+        let MadeMap { brightness, mut description, truth, file: format } = map;
         let bytes = encode(&brightness, &format)
             .map_err(|error| CliError::Encode { name: name.clone(), error })?;
         let file = format!("{name}.{}", extension(format.format));
@@ -173,7 +174,7 @@ impl Ready {
         cells.extend(MANIFEST_KEYS.map(|key| cell(description.get(key))));
         let mut line =
             Map::from_iter([("id".to_owned(), id), ("file".to_owned(), Value::from(file.clone()))]);
-        if let Value::Object(truth) = truth {
+        if let Value::Object(truth) = truth.values.to_json() {
             line.extend(truth.into_iter().filter(|(key, _)| key != "id" && key != "file"));
         }
         // Maps of strings, numbers and lists: writing them cannot fail.

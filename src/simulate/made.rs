@@ -11,6 +11,7 @@ use super::noise::{
 };
 use super::observe::{Canvas, Observation, described_core, geometry_keys};
 use super::parameters::Parameters;
+use super::scenario::{Scenario, ScenarioError};
 use super::scene::{GaussianShape, add_gaussian};
 use super::source::{Look, Part, SkyGaussian, SourceError, TwinSource, twin_source};
 use super::truth::{Truth, TruthInput, truth};
@@ -20,6 +21,9 @@ use crate::units::{Pixel, SkyOffset};
 /// Why no map can be made of parameters.
 #[derive(Clone, Debug, PartialEq, thiserror::Error)]
 pub enum MakeError {
+    /// Parameters that cannot be drawn.
+    #[error(transparent)]
+    Scenario(#[from] ScenarioError),
     /// Numbers that make no source.
     #[error(transparent)]
     Source(#[from] SourceError),
@@ -262,8 +266,14 @@ fn add_instrument(
         }
         if n.stripes > 0.0 {
             let period = n.stripe_period_arcsec * scale;
-            *brightness +=
-                &stripes(columns, rows, n.stripes * rms, period, angle(n.stripe_pa_deg), seed("stripes"));
+            *brightness += &stripes(
+                columns,
+                rows,
+                n.stripes * rms,
+                period,
+                angle(n.stripe_pa_deg),
+                seed("stripes"),
+            );
         }
     }
     let bright = brightest(made_truth);
@@ -399,7 +409,8 @@ fn file_format(brightness: &Array2<f64>, p: &Parameters, rms: f64, factor: f64) 
         Dtype::F4 | Dtype::F8 => (0.0, 0.0),
     };
     let integer_step = wanted.max(least);
-    let integer_step = if integer_step > 0.0 && integer_step.is_finite() { integer_step } else { 1.0 };
+    let integer_step =
+        if integer_step > 0.0 && integer_step.is_finite() { integer_step } else { 1.0 };
     // Unsigned counts begin at 1: 0 is blank.
     let integer_offset = match dtype {
         Dtype::U1 | Dtype::U2 if offset.is_finite() => offset - integer_step,
@@ -437,4 +448,50 @@ fn describe(p: &Parameters, look: &Look, id: &str, seed: u64) -> Map<String, Val
         put("core_spectral_index", json!(p.core.spectral_index));
     }
     keys
+}
+
+/// One made map with its name.
+#[derive(Clone, Debug)]
+pub struct Made {
+    /// Name of its files, without ending.
+    pub name: String,
+    /// The map.
+    pub map: MadeMap,
+}
+
+impl Scenario {
+    /// Makes all epochs of the source with this number (from 0). The same number gives the
+    /// same bytes whatever else is made.
+    ///
+    /// # Errors
+    /// Where the parameters drawn for this source make none.
+    pub fn make(&self, index: usize) -> Result<Vec<Made>, MakeError> {
+        let parameters = self.parameters(index)?;
+        let epochs = self.epochs();
+        let first_year = epochs.iter().find_map(|epoch| epoch.year);
+        let source = format!("{}-{index:05}", self.name());
+        epochs
+            .iter()
+            .enumerate()
+            .map(|(number, epoch)| {
+                let years = epoch.year.zip(first_year).map_or(0.0, |(year, first)| year - first);
+                let look = Look {
+                    frequency_ghz: epoch.frequency_ghz.unwrap_or(parameters.map.frequency_ghz),
+                    years,
+                    seed: stream_seed(self.seed(), index as u64, "source"),
+                };
+                let name = if epochs.len() == 1 {
+                    source.clone()
+                } else {
+                    format!("{source}-e{}", number + 1)
+                };
+                let mut map = make_map(&parameters, &look, number, &name)?;
+                if let Some(year) = epoch.year {
+                    map.description.insert("epoch".to_owned(), json!(year));
+                }
+                map.truth.values.value("id", json!(name));
+                Ok(Made { name, map })
+            })
+            .collect()
+    }
 }

@@ -8,7 +8,7 @@ import re
 import sys
 
 ROOT = pathlib.Path(__file__).resolve().parent.parent
-UPPER = {"noise", "source", "pipeline", "record", "cli", "write"}
+UPPER = {"noise", "source", "pipeline", "record", "cli", "write", "simulate"}
 PLAIN = {"units", "measurement", "constants"}
 MAY_TOUCH_FILES = ("src/cli/", "src/map/read.rs", "src/map/description.rs",
                    "src/map/manifest.rs", "src/write/mod.rs")
@@ -59,6 +59,8 @@ def complaint(name, line):
         return only(PLAIN)
     if name.startswith("src/physics"):
         return none_of({"map"} | UPPER)
+    if name.startswith("src/simulate"):
+        return none_of({"pipeline", "record", "assemble", "write"})
     if name.startswith("src/write"):
         return only({"record", "quantity", "measurement", "flags", "write"})
     if name.startswith("src/map"):

@@ -4,6 +4,7 @@
 pub mod beaming;
 pub mod cosmology;
 pub mod emission;
+pub mod priors;
 
 use schemars::JsonSchema;
 use serde::{Deserialize, Serialize};

@@ -5,7 +5,10 @@
 //! numbers come from a named generator, transcendental functions from `libm`, and sums run in
 //! a fixed order.
 
+pub mod noise;
 pub mod parameters;
+pub mod scenario;
 pub mod scene;
 
+pub use scenario::{Epoch, Scenario, ScenarioError, parameter_page};
 pub use scene::{Amount, GaussianComponent, GaussianShape, NoiseKind, Scene, jet, unit_noise};

@@ -10,7 +10,7 @@
 
 use super::beaming::{lorentz_factor, speed_from_lorentz_factor};
 
-/// Largest Lorentz factor of a prior: above it 1 − β keeps fewer than three digits.
+/// Largest Lorentz factor of a prior: there 1 − β is known to three digits.
 const MAX_LORENTZ_FACTOR: f64 = 1e6;
 /// Largest power of Γ or δ, either sign.
 const MAX_POWER: f64 = 100.0;

@@ -23,7 +23,7 @@ pub mod truth;
 pub use made::{ByteOrder, Dtype, FileFormat, Format, Made, MadeMap, MakeError, make_map};
 pub use noise::{NoiseKind, unit_noise};
 pub use parameters::Parameters;
-pub use scenario::{Epoch, Scenario, ScenarioError};
+pub use scenario::{Epoch, Scenario, ScenarioError, parameter_page};
 pub use scene::{Amount, GaussianComponent, GaussianShape, Scene, add_gaussian, jet};
 pub use source::{Look, Part, TwinSource};
 pub use truth::{Aperture, Truth};

@@ -554,8 +554,8 @@ impl TwinSource {
         for side in [0, 1] {
             let arm = self.arms_arcsec[side];
             let reach = p.lobes.length_share * arm;
-            // The head's edge, not its middle, lies at the hot spot.
-            let head = arm - (0.4 * width).min(0.5 * reach);
+            // The head's edge, not its middle, lies near the hot spot.
+            let head = arm - (0.25 * width).min(0.5 * reach);
             let cloud = Cloud {
                 part: Part::Lobe,
                 side: Some(side),
@@ -565,7 +565,7 @@ impl TwinSource {
                 seed: stream_seed(seed, side as u64, "lobe"),
                 texture: p.lobes.texture,
             };
-            self.add_cloud(&cloud, |share| (0.3 + 0.7 * share, width * (1.0 - 0.3 * share)));
+            self.add_cloud(&cloud, |share| (0.3 + 0.7 * share, width));
         }
     }
 

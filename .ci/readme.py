@@ -3,6 +3,7 @@
 import argparse
 import pathlib
 import re
+import shutil
 import subprocess
 import sys
 
@@ -23,6 +24,9 @@ def main():
     if not blocks:
         print("README.md shows no shell commands", file=sys.stderr)
         return 1
+    # What an earlier run of the same commands left is not theirs to overwrite.
+    for made in ROOT.glob("made*"):
+        shutil.rmtree(made) if made.is_dir() else made.unlink()
     for block in (block.strip() for block in blocks):
         if block in arguments.already:
             print(f"$ {block}\n(run before)")

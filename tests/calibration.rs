@@ -242,13 +242,13 @@ impl Score {
                 self.tallies.entry(path).or_default().add(&value, 0.0, Scale::Plain);
             }
         }
-        let swapped = self.is_swapped(record, truth, &json);
+        let swapped = is_swapped(truth, &json);
         if swapped && record.sides[0].role == Role::Jet {
             self.swapped += 1;
             return;
         }
         self.decided += usize::from(record.sides[0].role == Role::Jet);
-        let own = self.own_strip(truth, at("brightness.aperture"), swapped);
+        let own = own_strip(truth, at("brightness.aperture"), swapped);
         for &(path, scale, swap) in WHOLE {
             let by_strip = own.get(path).copied();
             let Some(true_value) = by_strip.or_else(|| truth.values.get(path)) else { continue };
@@ -274,56 +274,6 @@ impl Score {
         }
     }
 
-    /// Whether the record's first side is the truth's second.
-    fn is_swapped(&self, record: &MapRecord, truth: &Truth, json: &Value) -> bool {
-        let side = json["sides"].as_array().and_then(|sides| {
-            sides.iter().enumerate().find_map(|(index, side)| {
-                Some((index, side["end_position_angle_deg"]["value"].as_f64()?))
-            })
-        });
-        let Some((index, pa)) = side else { return false };
-        let pa = if index == 0 { pa } else { wrap_directed_deg(pa + 180.0) };
-        let _ = record;
-        let towards = |k: usize| {
-            let end = truth.values.get(&format!("sides.{k}.end_position_angle_deg"));
-            end.map(|end| wrap_difference_deg(pa - end).abs())
-        };
-        match (towards(0), towards(1)) {
-            (Some(a), Some(b)) => b < a,
-            (Some(a), None) => a > 90.0,
-            (None, Some(b)) => b < 90.0,
-            (None, None) => false,
-        }
-    }
-
-    /// The truth of what hangs on the strip, for the record's own strip and order.
-    fn own_strip(&self, truth: &Truth, aperture: &Value, swapped: bool) -> BTreeMap<&str, f64> {
-        let number = |key: &str| aperture[key].as_f64();
-        let (Some(inner_arcsec), Some(outer_arcsec), Some(half_width_arcsec)) =
-            (number("inner_arcsec"), number("outer_arcsec"), number("half_width_arcsec"))
-        else {
-            return BTreeMap::new();
-        };
-        let aperture = Aperture { inner_arcsec, outer_arcsec, half_width_arcsec };
-        let mut fluxes = truth.strip_fluxes_mjy(&aperture);
-        let edge = outer_arcsec + truth.observation.beam.major;
-        let mut lobes = [0, 1].map(|index| truth.flux_beyond_mjy(index, edge));
-        if swapped {
-            fluxes.swap(0, 1);
-            lobes.swap(0, 1);
-        }
-        BTreeMap::from([
-            ("brightness.jet_flux_density_mjy", fluxes[0]),
-            ("brightness.counter_jet_flux_density_mjy", fluxes[1]),
-            ("brightness.jet_to_counter_jet_ratio", fluxes[0] / fluxes[1]),
-            ("sides.0.jet.flux_density_mjy", fluxes[0]),
-            ("sides.1.jet.flux_density_mjy", fluxes[1]),
-            ("sides.0.lobe.flux_density_mjy", lobes[0]),
-            ("sides.1.lobe.flux_density_mjy", lobes[1]),
-            ("source.lobe_flux_ratio", lobes[0] / lobes[1]),
-        ])
-    }
-
     /// The table as text.
     pub fn table(&mut self, name: &str) -> String {
         let statuses: Vec<String> =
@@ -344,6 +294,57 @@ impl Score {
         }
         text
     }
+}
+
+/// Whether the record's first side is the truth's second.
+fn is_swapped(truth: &Truth, json: &Value) -> bool {
+    let side = json["sides"].as_array().and_then(|sides| {
+        sides.iter().enumerate().find_map(|(index, side)| {
+            Some((index, side["end_position_angle_deg"]["value"].as_f64()?))
+        })
+    });
+    let Some((index, pa)) = side else { return false };
+    let pa = if index == 0 { pa } else { wrap_directed_deg(pa + 180.0) };
+    let towards = |k: usize| {
+        let end = truth.values.get(&format!("sides.{k}.end_position_angle_deg"));
+        end.map(|end| wrap_difference_deg(pa - end).abs())
+    };
+    match (towards(0), towards(1)) {
+        (Some(a), Some(b)) => b < a,
+        (Some(a), None) => a > 90.0,
+        (None, Some(b)) => b < 90.0,
+        (None, None) => false,
+    }
+}
+
+/// The truth of what hangs on the strip, for the record's own strip and order.
+fn own_strip(truth: &Truth, aperture: &Value, swapped: bool) -> BTreeMap<&'static str, f64> {
+    let number = |key: &str| aperture[key].as_f64();
+    let (Some(inner_arcsec), Some(outer_arcsec), Some(half_width_arcsec)) =
+        (number("inner_arcsec"), number("outer_arcsec"), number("half_width_arcsec"))
+    else {
+        return BTreeMap::new();
+    };
+    let aperture = Aperture { inner_arcsec, outer_arcsec, half_width_arcsec };
+    let mut fluxes = truth.strip_fluxes_mjy(&aperture);
+    let edge = outer_arcsec + truth.observation.beam.major;
+    let mut lobes = [0, 1].map(|index| truth.flux_beyond_mjy(index, edge));
+    if swapped {
+        fluxes.swap(0, 1);
+        lobes.swap(0, 1);
+    }
+    // The strips' own fluxes carry the noise alone: they are those of the map as calibrated.
+    let scale = truth.values.get("intrinsic.flux_scale_factor").unwrap_or(1.0);
+    BTreeMap::from([
+        ("brightness.jet_flux_density_mjy", scale * fluxes[0]),
+        ("brightness.counter_jet_flux_density_mjy", scale * fluxes[1]),
+        ("brightness.jet_to_counter_jet_ratio", fluxes[0] / fluxes[1]),
+        ("sides.0.jet.flux_density_mjy", fluxes[0]),
+        ("sides.1.jet.flux_density_mjy", fluxes[1]),
+        ("sides.0.lobe.flux_density_mjy", lobes[0]),
+        ("sides.1.lobe.flux_density_mjy", lobes[1]),
+        ("source.lobe_flux_ratio", lobes[0] / lobes[1]),
+    ])
 }
 
 /// Maps of a scenario to measure.

@@ -431,3 +431,49 @@ fn help_fits_eighty_columns_with_a_line_a_flag_and_teaches_at_length() {
         assert!(flat.contains(part), "no {part:?} in {flat}");
     }
 }
+
+#[test]
+fn bad_scenarios_end_with_status_2_one_line_and_no_folder() {
+    // Text that replaces the first occurrence of another in a good scenario, and what the error
+    // must speak of.
+    let good = scenario("format = \"npy\"");
+    let bad: &[(&str, &str, &[&str])] = &[
+        ("seed = 5", "seed = ", &["test.toml:3", "TOML"]),
+        ("[core]", "[cores]", &["test.toml:6", "cores", "core"]),
+        ("columns", "collumns", &["collumns", "map.columns"]),
+        ("columns = 70", "columns = 0", &["map.columns", "0", "1"]),
+        ("columns = 70", "columns = 7.5", &["map.columns", "7.5", "whole"]),
+        ("columns = 70", "columns = \"many\"", &["map.columns", "many"]),
+        ("columns = 70", "columns = []", &["map.columns", "empty"]),
+        ("columns = 70\nrows = 62", "columns = 20000\nrows = 20000", &["pixels"]),
+        ("beam_major_arcsec = 4.0", "beam_major_arcsec = -4.0", &["map.beam_major_arcsec", "-4"]),
+        ("beam_major_arcsec = 4.0", "beam_minor_arcsec = 9.0", &["beam_minor", "beam_major"]),
+        ("flux_density_mjy = 60.0", "speed = 1.0", &["jet.speed", "below 1"]),
+        ("flux_density_mjy = 60.0", "speed = 0.5\nlorentz_factor = 2", &["jet.speed", "twice"]),
+        ("flux_density_mjy = 60.0", "flux_density_mjy = { uniform = [3, 1] }", &["uniform", "3"]),
+        ("flux_density_mjy = 60.0", "flux_density_mjy = { even = [1, 3] }", &["even", "uniform"]),
+        ("flux_density_mjy = 60.0", "flux_density_mjy = { uniform = [1] }", &["uniform", "two"]),
+        ("flux_density_mjy = 60.0", "flux_density_mjy = { log_uniform = [0, 1] }", &["0"]),
+        ("flux_density_mjy = 60.0", "flux_density_mjy = nan", &["jet.flux_density_mjy", "nan"]),
+        ("flux_density_mjy = 60.0", "flow = \"river\"", &["jet.flow", "river", "continuous"]),
+        ("length_arcsec = 20.0", "length_kpc = 20.0", &["redshift"]),
+        ("length_arcsec = 20.0", "advance_speed = 0.1", &["arms.length_arcsec"]),
+        ("count = 3", "count = 0", &["count", "0"]),
+        ("name = \"test-double\"", "name = \"a/b\"", &["name", "a/b", "letters"]),
+        ("[arms]", "[sample]\nselection = \"flux-limited\"\n[arms]", &["isotropic"]),
+        ("[arms]", "[knots]\ncount = 2\nmotion = \"moving\"\n[arms]", &["redshift"]),
+    ];
+    for (from, to, words) in bad {
+        assert!(good.contains(from), "{from}");
+        let outcome = Run::new(["simulate", "test.toml", "--out", "out"])
+            .file("test.toml", good.replacen(from, to, 1))
+            .status(2)
+            .run();
+        assert_eq!(outcome.stdout, "", "{to}");
+        assert_eq!(outcome.stderr.lines().count(), 1, "{to}: {}", outcome.stderr);
+        for word in *words {
+            assert!(outcome.stderr.contains(word), "{to}: no {word:?} in {}", outcome.stderr);
+        }
+        assert_eq!(outcome.names(), ["test.toml"], "{to}: nothing is left behind");
+    }
+}

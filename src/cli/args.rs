@@ -82,7 +82,7 @@ Examples:
   jetspan schema description";
 
 /// Most sources of one scenario.
-const MAX_COUNT: u64 = 10_000_000;
+const MAX_COUNT: u64 = crate::simulate::scenario::MAX_COUNT as u64;
 
 /// The whole command line.
 pub fn command() -> Command {
@@ -207,12 +207,12 @@ fn simulate_command() -> Command {
     };
     Command::new("simulate")
         .about("Makes maps with known truth: a folder of maps, descriptions and truth")
-        .override_usage("jetspan simulate <SCENARIO> --out <DIR> [OPTIONS]\n       jetspan simulate --list")
+        .override_usage("jetspan simulate <SCENARIO> --out <DIR> [OPTIONS]\n       jetspan simulate --list | --parameters")
         .long_about(SIMULATE_HELP)
         .after_long_help(SIMULATE_EXAMPLES)
         .arg(
             Arg::new("SCENARIO")
-                .required_unless_present("list")
+                .required_unless_present_any(["list", "parameters"])
                 .value_parser(value_parser!(PathBuf))
                 .help("scenario file (TOML), - for standard input, or a built-in name")
                 .long_help("A scenario: a TOML file, - for standard input, or the name of a built-in scenario. Where there is a file of that name, the file is taken."),
@@ -221,7 +221,7 @@ fn simulate_command() -> Command {
             Arg::new("out")
                 .long("out")
                 .value_name("DIR")
-                .required_unless_present("list")
+                .required_unless_present_any(["list", "parameters"])
                 .value_parser(value_parser!(PathBuf))
                 .help("new folder for the maps")
                 .long_help("The folder to make, inside one that exists. A folder with something in it is never touched: a mixture of two samples would be measured as one."),
@@ -249,6 +249,14 @@ fn simulate_command() -> Command {
                 .exclusive(true)
                 .help("list the built-in scenarios and end")
                 .long_help("Prints the name of every built-in scenario with a line about it, and makes nothing."),
+        )
+        .arg(
+            Arg::new("parameters")
+                .long("parameters")
+                .action(ArgAction::SetTrue)
+                .exclusive(true)
+                .help("list what a scenario may say and end")
+                .long_help("Prints every table and key of a scenario with its range, default and meaning, and how numbers are drawn; makes nothing."),
         )
 }
 

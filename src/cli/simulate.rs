@@ -11,7 +11,7 @@ use serde_json::{Map, Value};
 
 use super::{ALL_MEASURED, CliError, messages};
 use crate::map::description::{nearest, sidecar_path};
-use crate::simulate::{Made, MadeMap, Scenario};
+use crate::simulate::{Made, MadeMap, Scenario, parameter_page};
 use crate::write::encode::{description_of, encode, extension};
 use crate::write::folder::{Folder, FolderFile};
 use crate::write::{WriteError, print};
@@ -31,6 +31,10 @@ const MANIFEST: &str = "manifest.csv";
 pub fn run(matches: &ArgMatches) -> Result<u8, CliError> {
     if matches.get_flag("list") {
         print(&list())?;
+        return Ok(ALL_MEASURED);
+    }
+    if matches.get_flag("parameters") {
+        print(&parameter_page())?;
         return Ok(ALL_MEASURED);
     }
     let path = |id: &str| matches.get_one::<PathBuf>(id).cloned().unwrap_or_default();

@@ -174,7 +174,7 @@ fn smoothed(draws: &mut Draws, columns: usize, rows: usize, moments: [f64; 3]) -
 
 /// Noise whose kernel spans many pixels, made on coarse pixels of `joined` map pixels and brought
 /// back with a narrow Gaussian. That Gaussian's own moments are taken off the kernel's, so that
-/// the whole is the kernel asked for; what the coarse pixels leave behind is below 1e-8.
+/// the whole is the kernel asked for; what the coarse pixels leave behind is below 1e-4.
 fn smoothed_on_coarse_pixels(
     draws: &mut Draws,
     columns: usize,
@@ -305,7 +305,7 @@ fn lines_of_kernel([xx, xy, yy]: [f64; 3]) -> Vec<Line> {
         let (ax, ay, bx, by) = (a.0 as f64, a.1 as f64, b.0 as f64, b.1 as f64);
         xx * ax * bx + xy * (ax * by + ay * bx) + yy * ay * by
     };
-    let mut base = [(1, 0), (0, 1), (-1, -1)];
+    let mut base = [(1, 0), (0, -1), (-1, 1)];
     // Pairs and what is left, such that a kernel along the axes gives columns, then rows.
     let pairs = [(0, 2, 1), (1, 2, 0), (0, 1, 2)];
     let tolerance = 1e-12 * (xx + yy);

@@ -3,14 +3,9 @@
 //! The same input gives the same bytes on every machine: random numbers come from a named
 //! generator, transcendental functions from `libm`, and sums run in a fixed order.
 
+use super::noise::{NoiseKind, unit_noise};
+use crate::constants::GAUSSIAN_AREA;
 use ndarray::Array2;
-use rand::{Rng, SeedableRng};
-use rand_pcg::Pcg64Mcg;
-
-use crate::constants::{FWHM_PER_SIGMA, GAUSSIAN_AREA};
-
-/// Where a smoothing kernel is cut off, in standard deviations.
-const KERNEL_REACH_SIGMA: f64 = 4.7;
 
 /// An elliptical Gaussian shape on the array.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -152,104 +147,6 @@ pub fn jet(
             }
         })
         .collect()
-}
-
-/// The noise of a map.
-#[derive(Clone, Copy, Debug, PartialEq)]
-pub enum NoiseKind {
-    /// Independent from pixel to pixel.
-    White,
-    /// White noise smoothed with this kernel (for an ideal map: the beam).
-    Smoothed(GaussianShape),
-}
-
-/// Noise of this kind with an expected rms of exactly 1 and mean 0.
-pub fn unit_noise(columns: usize, rows: usize, kind: NoiseKind, seed: u64) -> Array2<f64> {
-    let mut rng = Pcg64Mcg::seed_from_u64(seed);
-    match kind {
-        NoiseKind::White => white(&mut rng, columns, rows),
-        NoiseKind::Smoothed(shape) => smoothed(&mut rng, columns, rows, shape),
-    }
-}
-
-fn white(rng: &mut Pcg64Mcg, columns: usize, rows: usize) -> Array2<f64> {
-    let mut spare = None;
-    Array2::from_shape_simple_fn((rows, columns), || {
-        spare.take().unwrap_or_else(|| {
-            let (a, b) = normal_pair(rng);
-            spare = Some(b);
-            a
-        })
-    })
-}
-
-/// Two independent unit Gaussian numbers (Box & Muller 1958).
-fn normal_pair(rng: &mut Pcg64Mcg) -> (f64, f64) {
-    const SCALE: f64 = 1.0 / (1u64 << 53) as f64;
-    // (0, 1]: the logarithm must not meet zero.
-    let u = ((rng.next_u64() >> 11) as f64 + 1.0) * SCALE;
-    let v = (rng.next_u64() >> 11) as f64 * SCALE;
-    let radius = (-2.0 * libm::log(u)).sqrt();
-    let angle = 2.0 * std::f64::consts::PI * v;
-    (radius * libm::cos(angle), radius * libm::sin(angle))
-}
-
-fn smoothed(rng: &mut Pcg64Mcg, columns: usize, rows: usize, shape: GaussianShape) -> Array2<f64> {
-    let [xx, xy, yy] = shape.moments();
-    let determinant = xx * yy - xy * xy;
-    if determinant <= 1e-12 || !determinant.is_finite() {
-        return white(rng, columns, rows);
-    }
-    let reach = |moment: f64| {
-        (KERNEL_REACH_SIGMA * moment.sqrt() / FWHM_PER_SIGMA).ceil().clamp(1.0, 1e4) as usize
-    };
-    let (rx, ry) = (reach(xx), reach(yy));
-    let source = white(rng, columns + 2 * rx, rows + 2 * ry);
-    let four_ln2 = 4.0 * std::f64::consts::LN_2;
-    if xy.abs() < 1e-12 * determinant.sqrt() {
-        let line = |moment: f64, reach: usize| -> Vec<f64> {
-            normalised((0..=2 * reach).map(|i| {
-                let d = i as f64 - reach as f64;
-                libm::exp(-four_ln2 * d * d / moment)
-            }))
-        };
-        let (kernel_x, kernel_y) = (line(xx, rx), line(yy, ry));
-        let mut across = Array2::zeros((rows + 2 * ry, columns));
-        for (i, weight) in kernel_x.iter().enumerate() {
-            add_shifted(&mut across, &source, (i, 0), *weight);
-        }
-        let mut out = Array2::zeros((rows, columns));
-        for (j, weight) in kernel_y.iter().enumerate() {
-            add_shifted(&mut out, &across, (0, j), *weight);
-        }
-        return out;
-    }
-    let offsets = || (0..=2 * ry).flat_map(|j| (0..=2 * rx).map(move |i| (i, j)));
-    let kernel = normalised(offsets().map(|(i, j)| {
-        let (dx, dy) = (i as f64 - rx as f64, j as f64 - ry as f64);
-        libm::exp(-four_ln2 * (yy * dx * dx - 2.0 * xy * dx * dy + xx * dy * dy) / determinant)
-    }));
-    let mut out = Array2::zeros((rows, columns));
-    for ((i, j), weight) in offsets().zip(&kernel) {
-        add_shifted(&mut out, &source, (i, j), *weight);
-    }
-    out
-}
-
-/// Adds `weight` times the part of `source` that starts at column and row `offset`.
-fn add_shifted(out: &mut Array2<f64>, source: &Array2<f64>, offset: (usize, usize), weight: f64) {
-    for (mut to, from) in out.rows_mut().into_iter().zip(source.rows().into_iter().skip(offset.1)) {
-        for (to, from) in to.iter_mut().zip(from.iter().skip(offset.0)) {
-            *to += weight * from;
-        }
-    }
-}
-
-/// Scales weights so that their squares sum to 1: unit noise keeps its rms.
-fn normalised(weights: impl Iterator<Item = f64>) -> Vec<f64> {
-    let weights: Vec<f64> = weights.collect();
-    let norm = weights.iter().map(|w| w * w).sum::<f64>().sqrt();
-    weights.iter().map(|w| w / norm).collect()
 }
 
 /// What a simulated map is made of.
@@ -402,33 +299,6 @@ mod tests {
         // 7 px along 30° is (6.06, 3.5); across it is (−3.5, 6.06).
         assert!(map[(24, 26)] > 5.0 * map[(26, 16)]);
         assert!(map[(24, 26)] > 5.0 * map[(16, 26)], "x towards y, not away from it");
-    }
-
-    #[test]
-    fn noise_has_the_asked_rms_and_is_the_same_everywhere() {
-        let kinds = [
-            NoiseKind::White,
-            NoiseKind::Smoothed(GaussianShape::circular(5.0)),
-            NoiseKind::Smoothed(GaussianShape { major_px: 6.0, minor_px: 3.0, angle_deg: 40.0 }),
-        ];
-        for kind in kinds {
-            let mut sum = 0.0;
-            let maps = 12;
-            for seed in 0..maps {
-                let map = unit_noise(200, 150, kind, seed);
-                sum += map.mapv(|v| v * v).mean().expect("not empty");
-            }
-            let rms = (sum / maps as f64).sqrt();
-            // 12 × 30000 px over 28 px per independent sample: rms known to 0.6 %.
-            assert!((rms - 1.0).abs() < 0.02, "{kind:?}: {rms}");
-        }
-        // The bytes this code wrote on x86_64: another platform or order must write the same.
-        let kind = NoiseKind::Smoothed(GaussianShape::circular(2.0));
-        let bits = |kind| unit_noise(2, 1, kind, 7).mapv(f64::to_bits).into_raw_vec_and_offset().0;
-        assert_eq!(bits(NoiseKind::White), [13829221845539370684, 4593786821480656663]);
-        assert_eq!(bits(kind), [4593101021603448065, 4612502302304577540]);
-        let map = unit_noise(4, 2, NoiseKind::White, 7);
-        assert_ne!(map, unit_noise(4, 2, NoiseKind::White, 8));
     }
 
     #[test]

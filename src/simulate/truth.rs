@@ -154,7 +154,8 @@ impl Nearer {
 struct Outline {
     ends: [SkyOffset; 2],
     points: Vec<SkyOffset>,
-    widest: Option<f64>,
+    /// The two points farthest apart across the longest chord.
+    widest: Option<[SkyOffset; 2]>,
     peaks: Vec<(SkyOffset, f64)>,
     flux_mjy: f64,
 }
@@ -213,10 +214,8 @@ fn outline(observation: &Observation, canvas: &Canvas, level: f64, rms: f64) -> 
     let (first, second, _) = farthest_pair(pixels.iter().copied(), &metric)?;
     let ends = [first, second].map(|p| canvas.frame.offset(p));
     let direction_deg = ends[1].minus(ends[0]).position_angle_deg();
-    let widest = widest_across(&pixels, &canvas.frame, direction_deg).map(|[p, q]| {
-        let across = SkyOffset::polar(1.0, direction_deg + 90.0);
-        canvas.frame.difference(p, q).dot(across).abs()
-    });
+    let widest = widest_across(&pixels, &canvas.frame, direction_deg)
+        .map(|points| points.map(|p| canvas.frame.offset(p)));
     let separation = 0.5 * observation.beam_area_px.sqrt();
     let peaks = local_maxima(grid, &noise, &regions, separation, settings.detection_sigma)
         .iter()
@@ -317,15 +316,19 @@ impl Truth {
             * share_between(0.0, across, -half, half)
     }
 
-    /// Where a side ends: its hot spot, else where its path last stands above the contour;
-    /// with the length along the path.
-    fn end_of(&self, side: usize, p: &Parameters, level: f64) -> Option<(SkyOffset, f64)> {
-        const STEPS: usize = 150;
-        let arm = self.source.arms_arcsec[side];
+    /// Where a side ends: its hot spot, else its ridge's last point.
+    fn end_of(&self, side: usize, p: &Parameters, level: f64) -> Option<SkyOffset> {
         let path = &self.source.paths[side];
         if p.hotspots.flux_density_mjy > 0.0 {
-            return Some((path.at(arm).0, arm));
+            return Some(path.at(self.source.arms_arcsec[side]).0);
         }
+        self.ridge_length_arcsec(side, level).map(|t| path.at(t).0)
+    }
+
+    /// Length along a side's path at which it last stands above the contour.
+    fn ridge_length_arcsec(&self, side: usize, level: f64) -> Option<f64> {
+        const STEPS: usize = 150;
+        let path = &self.source.paths[side];
         let step = (path.length_arcsec + 2.0 * self.observation.beam.major) / STEPS as f64;
         // The core's own beam is no side.
         let rest = || self.source.parts.iter().filter(|piece| piece.part != Part::Core);
@@ -333,16 +336,15 @@ impl Truth {
             .rev()
             .map(|i| i as f64 * step)
             .find(|&t| self.observation.brightness_at(rest(), path.at(t).0) >= level)
-            .map(|t| (path.at(t).0, t))
     }
 
     /// Which side of the source comes first: the jet where flow and angle make one, else the
     /// one whose end points to [0°, 180°).
-    fn roles(&self, ends: [Option<(SkyOffset, f64)>; 2]) -> [usize; 2] {
+    fn roles(&self, ends: [Option<SkyOffset>; 2]) -> [usize; 2] {
         if self.has_jet_side() {
             return [0, 1];
         }
-        let pa = ends[0].map_or(0.0, |end| end.0.position_angle_deg());
+        let pa = ends[0].map_or(0.0, SkyOffset::position_angle_deg);
         if pa < 180.0 { [0, 1] } else { [1, 0] }
     }
 
@@ -387,7 +389,7 @@ impl Truth {
     fn put_shape(
         &mut self,
         made: &TruthInput,
-        ends: [Option<(SkyOffset, f64)>; 2],
+        ends: [Option<SkyOffset>; 2],
         outline: Option<&Outline>,
         nearer: &Nearer,
         level: f64,
@@ -396,7 +398,7 @@ impl Truth {
         let order = self.order;
         let has_hotspots = p.hotspots.flux_density_mjy > 0.0;
         let values = &mut self.values;
-        if let [Some((a, _)), Some((b, _))] = order.map(|side| ends[side]) {
+        if let [Some(a), Some(b)] = order.map(|side| ends[side]) {
             let chord = b.minus(a);
             let pa = wrap_undirected_deg(chord.position_angle_deg());
             values.number("source.position_angle_deg", pa);
@@ -477,24 +479,18 @@ impl Truth {
             let class = if between / deconvolved > DIVISION { "II" } else { "I" };
             values.value("source.fr_class.class", json!(class));
         }
-        if let Some(width) = outline.widest {
-            // The chord across ends at whatever peak is near its two points.
+        if let Some([p, q]) = outline.widest {
             let across = wrap_directed_deg(direction_deg + 90.0);
-            let strongest = outline.peaks.iter().map(|p| p.1).fold(level, f64::max);
-            let own = width - 2.0 * beam_reach(strongest, level, beam.reach_along(across));
-            if resolved && own > 0.2 * beam.minor {
-                values.number("source.axial_ratio", (deconvolved / own).max(1.0));
+            let chord = p.minus(q).dot(SkyOffset::polar(1.0, across)).abs();
+            // A chord across that ends beside one peak is what the beam alone draws.
+            let width = chord - reach(p, across) - reach(q, across);
+            if resolved && width > 0.2 * beam.minor {
+                values.number("source.axial_ratio", (deconvolved / width).max(1.0));
             }
         }
     }
 
-    fn put_side(
-        &mut self,
-        index: usize,
-        side: usize,
-        made: &TruthInput,
-        end: Option<(SkyOffset, f64)>,
-    ) {
+    fn put_side(&mut self, index: usize, side: usize, made: &TruthInput, end: Option<SkyOffset>) {
         let p = made.parameters;
         let path = self.source.paths[side].clone();
         let beam_major = self.observation.beam.major;
@@ -511,14 +507,16 @@ impl Truth {
         let hotspot = (hotspot_flux > 0.0).then(|| path.at(self.source.arms_arcsec[side]).0);
         let hotspot_peak = hotspot.map(|at| self.observation.brightness_at(&self.source.parts, at));
         let frame = self.observation.frame;
+        let level = self.values.get("source.contour_mjy_per_beam").unwrap_or(f64::INFINITY);
+        let ridge_length = self.ridge_length_arcsec(side, level);
         let values = &mut self.values;
         values.value(&key("role"), json!(role));
         values.optional(&key("inner_position_angle_deg"), inner_deg);
         values.number(&key("flux_density_mjy"), flux);
-        if let Some((offset, length)) = end {
+        values.optional(&key("ridge_length_arcsec"), ridge_length);
+        if let Some(offset) = end {
             let end_deg = offset.position_angle_deg();
             values.number(&key("end_position_angle_deg"), end_deg);
-            values.number(&key("ridge_length_arcsec"), length);
             if let Some(inner_deg) = inner_deg {
                 values.number(&key("bend_deg"), wrap_difference_deg(end_deg - inner_deg));
             }

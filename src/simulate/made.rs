@@ -30,6 +30,14 @@ pub enum MakeError {
     /// Numbers that make no array on the sky.
     #[error(transparent)]
     Description(#[from] DescriptionError),
+    /// One of a scenario's sources cannot be made.
+    #[error("source {name}: {error}")]
+    Numbered {
+        /// Its name.
+        name: String,
+        /// Why.
+        error: Box<MakeError>,
+    },
 }
 
 /// One made map.
@@ -485,7 +493,9 @@ impl Scenario {
                 } else {
                     format!("{source}-e{}", number + 1)
                 };
-                let mut map = make_map(&parameters, &look, number, &name)?;
+                let mut map = make_map(&parameters, &look, number, &name).map_err(|error| {
+                    MakeError::Numbered { name: name.clone(), error: Box::new(error) }
+                })?;
                 if let Some(year) = epoch.year {
                     map.description.insert("epoch".to_owned(), json!(year));
                 }

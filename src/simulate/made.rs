@@ -9,7 +9,7 @@ use super::noise::{
     neighbour_fluxes_and_places, quantise, rings, rms_field, spokes, stream_seed, stripes,
     unit_noise,
 };
-use super::observe::{Canvas, Observation, described_core, geometry_keys};
+use super::observe::{Canvas, Observation, described_core, geometry_keys, is_one};
 use super::parameters::Parameters;
 use super::scenario::{Scenario, ScenarioError};
 use super::scene::{GaussianShape, add_gaussian};
@@ -181,7 +181,7 @@ fn sky(
 
 /// The rms field on the array, 1 at its middle.
 fn field(p: &Parameters, observation: &Observation) -> Option<Array2<f64>> {
-    let flat = p.noise.gradient == 1.0 && p.noise.edge_rise == 1.0;
+    let flat = is_one(p.noise.gradient) && is_one(p.noise.edge_rise);
     (!flat).then(|| {
         rms_field(
             observation.columns,
@@ -340,7 +340,7 @@ fn store(
     };
     let is_per_pixel = p.map.unit.ends_with("pixel");
     let factor = if is_per_pixel { per_beam / observation.beam_area_px } else { per_beam };
-    if factor != 1.0 {
+    if !is_one(factor) {
         brightness.mapv_inplace(|v| v * factor);
     }
     let rms = made_truth.values.get("noise.rms_mjy_per_beam").unwrap_or(0.0) * factor;

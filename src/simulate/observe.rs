@@ -224,6 +224,11 @@ impl Canvas {
     }
 }
 
+/// Whether a factor leaves everything as it is.
+pub fn is_one(factor: f64) -> bool {
+    (factor - 1.0).abs() < f64::EPSILON
+}
+
 /// Pixel of the core as it is described: the array's middle and the offset asked for.
 pub fn described_core(parameters: &Parameters) -> Pixel {
     let map = &parameters.map;
@@ -245,7 +250,7 @@ pub fn geometry_keys(parameters: &Parameters) -> Map<String, Value> {
     let (column, row) = (map.pixel_scale_arcsec, map.pixel_scale_arcsec * map.pixel_aspect);
     put(
         "pixel_scale_arcsec",
-        if map.pixel_aspect == 1.0 { json!(column) } else { json!([column, row]) },
+        if is_one(map.pixel_aspect) { json!(column) } else { json!([column, row]) },
     );
     put("beam_major_arcsec", json!(map.beam_major_arcsec));
     put("beam_minor_arcsec", json!(map.beam_minor_arcsec.unwrap_or(map.beam_major_arcsec)));

@@ -19,8 +19,8 @@ use jetspan::simulate::{Aperture, Made, MadeMap, Scenario, Truth};
 use jetspan::units::{wrap_difference_deg, wrap_directed_deg};
 use serde_json::Value;
 
-/// The record of a made map.
-pub fn measured(map: &MadeMap, settings: &Settings) -> MapRecord {
+/// The record of a made map, or the code of the reason why it cannot be measured.
+pub fn measured(map: &MadeMap, settings: &Settings) -> Result<MapRecord, &'static str> {
     let (rows, columns) = map.brightness.dim();
     let stored = StoredArray {
         samples: Samples::F32(map.brightness.iter().map(|&v| v as f32).collect()),
@@ -36,7 +36,7 @@ pub fn measured(map: &MadeMap, settings: &Settings) -> MapRecord {
     let description = resolve(vec![layer]).expect("consistent description");
     let map = SkyMap::from_stored(stored, description).expect("a map");
     let name = MapName { id: "made".to_owned(), file: "made.npy".to_owned() };
-    measure(&map, &name, settings).expect("a record")
+    measure(&map, &name, settings).map_err(|error| error.code())
 }
 
 /// How a quantity is compared.
@@ -208,7 +208,17 @@ pub struct Score {
 
 impl Score {
     /// Adds one map.
-    pub fn add(&mut self, record: &MapRecord, truth: &Truth) {
+    pub fn add(&mut self, record: Result<MapRecord, &'static str>, truth: &Truth) {
+        match record {
+            Ok(record) => self.add_record(&record, truth),
+            Err(code) => {
+                self.maps += 1;
+                *self.statuses.entry(format!("failed: {code}")).or_default() += 1;
+            }
+        }
+    }
+
+    fn add_record(&mut self, record: &MapRecord, truth: &Truth) {
         let json = serde_json::to_value(record).expect("a record");
         self.maps += 1;
         let status = json["status"].as_str().expect("a status").to_owned();
@@ -370,7 +380,7 @@ fn calibration_of_the_built_in_scenarios() {
         let mut score = Score::default();
         for index in 0..from_environment("JETSPAN_MAPS").unwrap_or(4) {
             for Made { map, .. } in scenario.make(index).expect("a map") {
-                score.add(&measured(&map, &settings), &map.truth);
+                score.add(measured(&map, &settings), &map.truth);
             }
         }
         eprint!("{}", score.table(name));

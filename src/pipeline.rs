@@ -249,8 +249,10 @@ fn measure_sides(
         follow_sigma: settings.follow_ridge_sigma,
         reference_sigma: 0.5 * settings.follow_ridge_sigma,
     };
+    let (window, frame, beam) = (&model.coreless, &model.frame, &observed.working_beam);
+    let clear = [0, 1].map(|k: usize| ridges[k].away_from_blanks(window, frame, 0.6 * beam.major));
     let side = |k: usize| StripSide {
-        ridge: &ridges[k],
+        ridge: &clear[k],
         hotspot: features[k].hotspot.map(|h| (h.distance(), h.peak.value)),
     };
     let ends_deg = [0, 1].map(|k| {
@@ -259,8 +261,14 @@ fn measure_sides(
     });
     let placed: PlacedStrip =
         place_strip([side(0), side(1)], ends_deg, &observed.working_beam, &rule)?;
-    let strip = placed.strip;
     let scale = map.geometry.mean_scale();
+    let refs = [&clear[0], &clear[1]];
+    let around = PolarCells::around(window, frame, placed.strip.outer + beam.major + 3.0 * scale);
+    let beams = (&observed.noise, beam.area_px(&map.geometry));
+    let placed = placed
+        .short_of_flares(window, frame, &around, refs, beam, beams)
+        .fitted_to_jet(window, frame, &around, refs, beams);
+    let strip = placed.strip;
     let grown =
         region_mask(map.columns, map.rows, &observed.regions, observed.working_beam.major / scale);
     let origin = model.frame.origin;
@@ -278,12 +286,9 @@ fn measure_sides(
     if near_factor > 1.2 {
         flags.push(Flag::new(flags::STRIP_NEAR_BRIGHT, &[("factor", near_factor)]));
     }
-    let refs = [&ridges[0], &ridges[1]];
-    let around = PolarCells::around(&model.coreless, &model.frame, strip.outer + 3.0 * scale);
     let noise = (&observed.noise, &observed.correlation);
-    let measured = |ends: (f64, f64)| {
-        measure_strips(&model.coreless, &model.frame, &around, refs, &placed, ends, noise)
-    };
+    let measured =
+        |ends: (f64, f64)| measure_strips(window, frame, &around, refs, &placed, ends, noise);
     let pair = measured((strip.inner, strip.outer));
     let structure = pair.fluxes[0].weights.as_ref().map_or(1.0, |weights| {
         noise::structure_factor(map, &observed.noise, &observed.correlation, &grown, weights)
@@ -301,10 +306,21 @@ fn measure_sides(
     let follows_both = placed.follows[0] && placed.follows[1];
     let seen = |k: usize| ridges[k].detected || features[k].hotspot.is_some();
     let off_axis = misalignment_deg.to_radians() * strip.outer > strip.half_width;
-    if !follows_both && seen(0) && seen(1) && off_axis {
+    let pair = if !follows_both && seen(0) && seen(1) && off_axis {
         let numbers = [("misalignment_deg", misalignment_deg)];
         flags.push(Flag::new(flags::STRIP_OFF_AXIS, &numbers));
-    }
+        // Along its own ridge the fainter side shows more: by that much its flux is in doubt.
+        let other = 1 - placed.reference;
+        let own = PlacedStrip { follows: [true; 2], ..placed.clone() };
+        let sum = |placed: &PlacedStrip| {
+            let ends = (strip.inner, strip.outer);
+            measure_strips(window, frame, &around, refs, placed, ends, noise).fluxes[other].sum
+        };
+        let doubt = sum(&own) - pair.fluxes[other].sum;
+        pair.in_doubt(other, doubt)
+    } else {
+        pair
+    };
     let pieces = (((strip.outer - strip.inner) / observed.working_beam.major).floor() as usize)
         .clamp(1, 200);
     let length = (strip.outer - strip.inner) / pieces as f64;

@@ -736,7 +736,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "",
         Brightness,
         "Signed strip flux of sides[0]; may be negative. Error from the noise alone (the flux scale cancels in R).",
-        "Σ pixels in the strip − mean of two bands beside it × area",
+        "Σ pixels in the strip − base under it: a polynomial of fourth order across, fitted to two bands beside",
         "own definition of the record",
     ),
     quantity(
@@ -781,7 +781,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "",
         Angle,
         "Half the strips' width.",
-        "one projected beam width",
+        "0.65 of the jet's FWHM as seen, which is the projected beam's at the least",
         "own definition of the record",
     ),
     quantity(

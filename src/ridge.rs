@@ -70,6 +70,18 @@ impl Ridge {
         wrap_directed_deg(a.bearing_deg + t * wrap_difference_deg(b.bearing_deg - a.bearing_deg))
     }
 
+    /// The same without the points that have blank pixels within a distance: beside a hole the
+    /// crest is the hole's edge. Between those left the bearing is interpolated.
+    pub fn away_from_blanks(&self, window: &Window, frame: &LocalFrame, distance: f64) -> Self {
+        let clear = |point: &&RidgePoint| {
+            (0..8).all(|k| {
+                let beside = SkyOffset::polar(distance, f64::from(k) * 45.0);
+                window.usable_nearest(frame.pixel(point.offset.plus(beside)))
+            })
+        };
+        Self { points: self.points.iter().filter(clear).copied().collect(), ..self.clone() }
+    }
+
     /// Length along the ridge from the core to its last point.
     pub fn length(&self) -> f64 {
         let mut previous = SkyOffset::default();

@@ -234,8 +234,37 @@ impl PlacedStrip {
             })
             .fold(f64::INFINITY, f64::min);
         let shortest = self.strip.inner + LEAST_LENGTH_BEAMS * beam.major;
-        self.strip.outer = self.strip.outer.min((flare - beam.major).max(shortest));
+        let end = (flare - beam.major).min(self.usable_until(around, ridges, beam));
+        self.strip.outer = self.strip.outer.min(end.max(shortest));
         self
+    }
+
+    /// Distance from the core up to which either strip holds usable pixels: a gap longer than
+    /// two beams, or one that reaches the end, ends it (another source, the map's edge).
+    fn usable_until(&self, around: &PolarCells, ridges: [&Ridge; 2], beam: &Beam) -> f64 {
+        let Strip { inner, outer, half_width, .. } = self.strip;
+        let step = 0.5 * beam.major;
+        let count = ((outer - inner) / step).ceil().max(0.0) as usize;
+        let mut bins = vec![(0_usize, 0_usize); count];
+        for cell in around.between(inner, outer) {
+            let bearing = self.bearing(ridges, self.reference, cell.radius);
+            let turn = wrap_difference_deg(cell.bearing_deg - bearing);
+            let index = ((cell.radius - inner) / step).floor().max(0.0) as usize;
+            if cell.radius * turn.to_radians().abs() <= half_width
+                && let Some(bin) = bins.get_mut(index)
+            {
+                bin.0 += usize::from(cell.pair_usable);
+                bin.1 += 1;
+            }
+        }
+        let mut gap = 0;
+        for (index, (usable, all)) in bins.iter().enumerate() {
+            gap = if 2 * usable < *all { gap + 1 } else { 0 };
+            if gap > 4 || (gap > 0 && index + 1 == count) {
+                return inner + (index + 1 - gap) as f64 * step;
+            }
+        }
+        outer
     }
 
     /// Distance from the core at which the emission beside one side's jet rises.

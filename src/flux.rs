@@ -46,6 +46,34 @@ pub fn sum_where(
     Sum { value, sigma: (variance.max(0.0) + background).sqrt(), area_px }
 }
 
+/// What fades out of a sum's edge, from the flux in the outermost ring and in the equal one
+/// inside it, when the fall from ring to ring goes on: a geometric series. Half of it is its
+/// own error. Nothing is added where the rings do not fall or hold no flux.
+pub fn beyond_edge(inner_ring: f64, outer_ring: &Sum) -> Sum {
+    let fall = outer_ring.value / inner_ring;
+    if !(inner_ring > 0.0 && outer_ring.value > 0.0 && fall < 1.0) {
+        return Sum::default();
+    }
+    let fall = fall.min(STEEPEST_REMAINDER);
+    let share = fall / (1.0 - fall);
+    let value = outer_ring.value * share;
+    Sum { value, sigma: (0.5 * value).hypot(outer_ring.sigma * share), area_px: 0.0 }
+}
+
+/// Rings that fall less than this from one to the next say little about what follows.
+const STEEPEST_REMAINDER: f64 = 0.6;
+
+impl Sum {
+    /// This sum and another whose noise is its own.
+    pub fn plus(self, other: Self) -> Self {
+        Self {
+            value: self.value + other.value,
+            sigma: self.sigma.hypot(other.sigma),
+            area_px: self.area_px + other.area_px,
+        }
+    }
+}
+
 /// Window cells within `grow_px` of the members, neighbours left out.
 pub fn widened(
     window: &Window,
@@ -87,6 +115,19 @@ mod tests {
         // variance again.
         let unsure = sum_where(&window, (&noise, &white), 200.0, |r, _| r < 10);
         assert!((unsure.sigma - sum.sigma * 1.5f64.sqrt()).abs() < 1e-9, "{}", unsure.sigma);
+    }
+
+    #[test]
+    fn what_fades_beyond_the_edge_is_a_geometric_series() {
+        let ring = Sum { value: 8.0, sigma: 1.0, area_px: 40.0 };
+        // 16, 8, then 4 + 2 + 1 + ... = 8; its error is half of it and the ring's noise.
+        let rest = beyond_edge(16.0, &ring);
+        assert!((rest.value - 8.0).abs() < 1e-12);
+        assert!((rest.sigma - 17f64.sqrt()).abs() < 1e-12);
+        for (inner, outer) in [(8.0, 9.0), (-1.0, 1.0), (5.0, -2.0)] {
+            let rest = beyond_edge(inner, &Sum { value: outer, sigma: 1.0, area_px: 40.0 });
+            assert_eq!(rest, Sum::default(), "{inner} {outer}");
+        }
     }
 
     #[test]

@@ -261,6 +261,7 @@ impl Score {
         }
         self.decided += usize::from(record.sides[0].role == Role::Jet);
         let own = own_strip(truth, at("brightness.aperture"), swapped);
+        self.add_ratio(at("brightness"), &own);
         for &(path, scale, swap) in WHOLE {
             let by_strip = own.get(path).copied();
             let Some(true_value) = by_strip.or_else(|| truth.values.get(path)) else { continue };
@@ -283,6 +284,31 @@ impl Score {
                 let tally = self.tallies.entry(format!("sides.{name}")).or_default();
                 tally.add(at(&path), true_value, scale);
             }
+        }
+    }
+
+    /// The ratio where the fainter strip truly holds five of its errors or more, and where it
+    /// holds less while the brighter one is strong.
+    fn add_ratio(&mut self, brightness: &Value, own: &BTreeMap<&str, f64>) {
+        let Some(&truth) = own.get("brightness.jet_to_counter_jet_ratio") else { return };
+        let flux = |key: &str| {
+            let value = &brightness[key];
+            let true_flux = own.get(format!("brightness.{key}").as_str()).copied();
+            Some(true_flux? / value["plus"].as_f64()?)
+        };
+        let (Some(a), Some(b)) =
+            (flux("jet_flux_density_mjy"), flux("counter_jet_flux_density_mjy"))
+        else {
+            return;
+        };
+        let ratio = &brightness["jet_to_counter_jet_ratio"];
+        if a.min(b) >= 5.0 {
+            let path = "ratio, fainter strip at 5 sigma or more".to_owned();
+            self.tallies.entry(path).or_default().add(ratio, truth, Scale::Plain);
+        } else if a.max(b) >= 8.0 {
+            let path = "ratio, fainter strip below 5 sigma, brighter above 8".to_owned();
+            let tally = self.tallies.entry(path).or_default();
+            tally.add(ratio, truth, Scale::Plain);
         }
     }
 

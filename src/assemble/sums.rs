@@ -2,7 +2,7 @@
 
 use super::Findings;
 use crate::brightness::{FluxPair, ratio};
-use crate::flux::{Sum, sum_where, widened};
+use crate::flux::{Sum, beyond_edge, sum_where, widened};
 use crate::measurement::{Because, Measurement};
 use crate::source::sides::{end_offset, side_of};
 use crate::units::SkyOffset;
@@ -41,7 +41,22 @@ pub(super) fn sum_parts(findings: &Findings, order: [usize; 2]) -> Sums {
         lobe_width: [None; 2],
         beam_area_px: beam.area_px(&map.geometry),
     };
-    let Some((ridges, features)) = &model.sides else { return sums };
+    // The outermost half beam of what is summed, and the half beam inside it.
+    let half = widened(&model.window, &members, map.columns, map.rows, 0.5 * grow);
+    let own = |r: usize, c: usize| model.window.member[[r, c]];
+    let rest = |part: &dyn Fn(usize, usize) -> bool| {
+        let outer = sum_where(&model.window, correlation, background_px, |r, c| {
+            inside[[r, c]] && !half[[r, c]] && part(r, c)
+        });
+        let inner = sum_where(&model.window, correlation, background_px, |r, c| {
+            half[[r, c]] && !own(r, c) && part(r, c)
+        });
+        beyond_edge(inner.value, &outer)
+    };
+    let Some((ridges, features)) = &model.sides else {
+        sums.total = sums.total.plus(rest(&|_, _| true));
+        return sums;
+    };
     let offset = |r: usize, c: usize| model.frame.offset(model.coreless.pixel(r, c));
     let side = |r: usize, c: usize| side_of(ridges, offset(r, c));
     sums.sides = [0, 1].map(|k| {
@@ -49,6 +64,11 @@ pub(super) fn sum_parts(findings: &Findings, order: [usize; 2]) -> Sums {
             inside[[r, c]] && side(r, c) == k
         })
     });
+    for k in [0, 1] {
+        let rest = rest(&|r, c| side(r, c) == k);
+        sums.sides[k] = sums.sides[k].plus(rest);
+        sums.total = sums.total.plus(rest);
+    }
     if let Some(strips) = &findings.strips {
         let edge = strips.placed.strip.outer + beam.major;
         sums.lobes = Some(order.map(|k| {

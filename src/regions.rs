@@ -148,12 +148,34 @@ pub(crate) fn groups_above(
         noise.row_into(y, &mut background, &mut rms);
         // 0 below the outline, 1 above it, 2 above the detection threshold.
         heights.clear();
-        let row = values.iter().zip(&background).zip(&rms);
-        heights.extend(row.map(|((value, background), rms)| {
+        heights.resize(values.len(), 0);
+        let signal = |value: f64, background: f64| {
             let signal = value - background;
-            let signal = if both_signs { signal.abs() } else { signal };
-            u8::from(signal >= outline * rms) + u8::from(signal >= detection * rms)
-        }));
+            if both_signs { signal.abs() } else { signal }
+        };
+        const LANES: usize = 8;
+        let blocks = values.chunks(LANES).zip(background.chunks(LANES)).zip(rms.chunks(LANES));
+        for (((values, background), rms), heights) in blocks.zip(heights.chunks_mut(LANES)) {
+            if let (Some(values), Some(background), Some(rms)) = (
+                values.first_chunk::<LANES>(),
+                background.first_chunk::<LANES>(),
+                rms.first_chunk::<LANES>(),
+            ) {
+                let mut above = 0u32;
+                for lane in 0..LANES {
+                    let high = signal(values[lane], background[lane]) >= outline * rms[lane];
+                    above |= u32::from(high);
+                }
+                if above == 0 {
+                    continue;
+                }
+            }
+            let row = values.iter().zip(background).zip(rms).zip(heights);
+            for (((value, background), rms), height) in row {
+                let signal = signal(*value, *background);
+                *height = u8::from(signal >= outline * rms) + u8::from(signal >= detection * rms);
+            }
+        }
         let mut x = 0;
         while let Some(rest) = heights.get(x..) {
             // Empty sky is skipped eight pixels at a time.
@@ -333,9 +355,12 @@ pub fn local_maxima(
     for run in regions.iter().flat_map(|region| &region.runs) {
         for x in run.x0..=run.x1 {
             let value = grid.value(x, run.y);
+            // Few pixels pass this; the noise is worked out for them alone.
+            if neighbours(grid, x, run.y).any(|other| other > value) {
+                continue;
+            }
             let (fx, fy) = (x as f64, run.y as f64);
-            let enough = value - noise.background(fx, fy) >= minimum_snr * noise.rms(fx, fy);
-            if enough && !neighbours(grid, x, run.y).any(|other| other > value) {
+            if value - noise.background(fx, fy) >= minimum_snr * noise.rms(fx, fy) {
                 candidates.push((x, run.y, value));
             }
         }

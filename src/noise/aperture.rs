@@ -1,6 +1,6 @@
 //! The error of a weighted sum of pixels.
 
-use super::{Noise, NoiseCorrelation};
+use super::{Noise, NoiseCorrelation, dot};
 use crate::grid::{Grid, PixelMask};
 use crate::stats::{mad_sigma, median};
 
@@ -115,18 +115,6 @@ impl ApertureWeights {
         })
         .sum()
     }
-}
-
-fn dot(a: &[f64], b: &[f64]) -> f64 {
-    let mut lanes = [0.0; 8];
-    let (a8, a_rest) = a.as_chunks::<8>();
-    let (b8, b_rest) = b.as_chunks::<8>();
-    for (a, b) in a8.iter().zip(b8) {
-        for lane in 0..8 {
-            lanes[lane] += a[lane] * b[lane];
-        }
-    }
-    lanes.iter().sum::<f64>() + a_rest.iter().zip(b_rest).map(|(a, b)| a * b).sum::<f64>()
 }
 
 impl NoiseCorrelation {

@@ -5,7 +5,7 @@ use statrs::distribution::{ContinuousCDF, Normal};
 use super::{Field, Noise, NoiseError, NoiseHints, NoiseSettings};
 use super::{grow_px, quantisation_floor, source_mask};
 use crate::grid::PixelMask;
-use crate::stats::sorted_quantile;
+use crate::stats::{sort_ascending, sorted_quantile};
 
 /// Most of the pixels that may sit at the floor while the rest still shows the noise.
 const MOST_AT_FLOOR: f64 = 0.8;
@@ -105,7 +105,7 @@ fn split(field: &Field, mask: &PixelMask, edge: f64) -> (Vec<f64>, usize) {
             }
         }
     }
-    above.sort_unstable_by(f64::total_cmp);
+    sort_ascending(&mut above);
     (above, at_floor)
 }
 
@@ -221,7 +221,7 @@ pub(super) fn check_for_cut_to_blank(field: &Field) -> Result<(), NoiseError> {
         return Ok(());
     }
     let mut sorted: Vec<f64> = field.values.iter().copied().filter(|v| !v.is_nan()).collect();
-    sorted.sort_unstable_by(f64::total_cmp);
+    sort_ascending(&mut sorted);
     let at = |q| sorted_quantile(&sorted, q).unwrap_or(0.0);
     let (low, middle) = (at(0.16), at(0.5));
     // Gaussian values reach 2.5 rms below the middle in 100 samples; a cut distribution

@@ -26,7 +26,7 @@ use thiserror::Error;
 
 use crate::grid::{Grid, PixelMask};
 use crate::regions::{Run, groups_above};
-use crate::stats::{clipped_about, mad_sigma};
+use crate::stats::{PresentRange, clipped_about, mad_sigma};
 
 /// How background and rms are measured.
 #[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize, JsonSchema)]
@@ -205,6 +205,21 @@ fn measure(
     tiles::estimate(field, settings, hints)
 }
 
+/// Σ a b in eight lanes, over the shorter length.
+fn dot(a: &[f64], b: &[f64]) -> f64 {
+    let shared = a.len().min(b.len());
+    let (a, b) = (a.get(..shared).unwrap_or(&[]), b.get(..shared).unwrap_or(&[]));
+    let mut lanes = [0.0; 8];
+    let (a8, a_rest) = a.as_chunks::<8>();
+    let (b8, b_rest) = b.as_chunks::<8>();
+    for (a, b) in a8.iter().zip(b8) {
+        for lane in 0..8 {
+            lanes[lane] += a[lane] * b[lane];
+        }
+    }
+    lanes.iter().sum::<f64>() + a_rest.iter().zip(b_rest).map(|(a, b)| a * b).sum::<f64>()
+}
+
 /// Smallest rms that the number format can show (uniform rounding error of one step).
 pub(crate) fn quantisation_floor(hints: &NoiseHints) -> f64 {
     let step = hints.quantisation_step;
@@ -260,12 +275,10 @@ impl Field {
         for y in 0..rows {
             grid.row_into(y, &mut row);
             row.resize(columns, f64::NAN);
-            for value in &row {
-                // Comparisons with NaN are false: blanks do not count.
-                present += usize::from(!value.is_nan());
-                lowest = if *value < lowest { *value } else { lowest };
-                highest = if *value > highest { *value } else { highest };
-            }
+            let range = PresentRange::of(&row);
+            present += range.count;
+            lowest = range.lowest.min(lowest);
+            highest = range.highest.max(highest);
             values.extend_from_slice(&row);
         }
         Self { columns, rows, values, present, lowest, highest }

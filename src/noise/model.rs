@@ -97,8 +97,10 @@ impl Noise {
             let high = nodes.get(j1 * width + i).copied().unwrap_or(0.0);
             low + u * (high - low)
         };
-        if width == 1 {
-            out.resize(self.columns, at(0));
+        let first = at(0);
+        // Even noise has one value along the row.
+        if (1..width).all(|i| at(i).to_bits() == first.to_bits()) {
+            out.resize(self.columns, first);
             return;
         }
         for i in 0..width - 1 {

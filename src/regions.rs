@@ -132,6 +132,9 @@ pub fn find_regions(grid: &dyn Grid, noise: &Noise, settings: &RegionSettings) -
     regions
 }
 
+/// Pixels of a row that are looked at together.
+const LANES: usize = 8;
+
 /// The runs of every hysteresis group of (v − background)/rms; `both_signs` takes holes as
 /// deep as the peaks too.
 pub(crate) fn groups_above(
@@ -143,17 +146,15 @@ pub(crate) fn groups_above(
 ) -> Vec<Vec<Run>> {
     let (mut values, mut background, mut rms) = (Vec::new(), Vec::new(), Vec::new());
     let mut heights: Vec<u8> = Vec::new();
+    let signal = |value: f64, background: f64| {
+        let signal = value - background;
+        if both_signs { signal.abs() } else { signal }
+    };
     connected_runs(grid.rows(), |y, found| {
         grid.row_into(y, &mut values);
         noise.row_into(y, &mut background, &mut rms);
-        // 0 below the outline, 1 above it, 2 above the detection threshold.
         heights.clear();
         heights.resize(values.len(), 0);
-        let signal = |value: f64, background: f64| {
-            let signal = value - background;
-            if both_signs { signal.abs() } else { signal }
-        };
-        const LANES: usize = 8;
         let blocks = values.chunks(LANES).zip(background.chunks(LANES)).zip(rms.chunks(LANES));
         for (((values, background), rms), heights) in blocks.zip(heights.chunks_mut(LANES)) {
             if let (Some(values), Some(background), Some(rms)) = (
@@ -161,11 +162,9 @@ pub(crate) fn groups_above(
                 background.first_chunk::<LANES>(),
                 rms.first_chunk::<LANES>(),
             ) {
-                let mut above = 0u32;
-                for lane in 0..LANES {
-                    let high = signal(values[lane], background[lane]) >= outline * rms[lane];
-                    above |= u32::from(high);
-                }
+                let above = (0..LANES).fold(0u32, |above, k| {
+                    above | u32::from(signal(values[k], background[k]) >= outline * rms[k])
+                });
                 if above == 0 {
                     continue;
                 }
@@ -176,25 +175,58 @@ pub(crate) fn groups_above(
                 *height = u8::from(signal >= outline * rms) + u8::from(signal >= detection * rms);
             }
         }
-        let mut x = 0;
-        while let Some(rest) = heights.get(x..) {
-            // Empty sky is skipped eight pixels at a time.
-            if rest.first_chunk::<8>().is_some_and(|eight| u64::from_ne_bytes(*eight) == 0) {
-                x += 8;
-                continue;
-            }
-            match rest.iter().position(|h| *h > 0) {
-                None => break,
-                Some(skip) if skip > 0 => x += skip,
-                Some(_) => {
-                    let length = rest.iter().position(|h| *h == 0).unwrap_or(rest.len());
-                    let strong = rest.iter().take(length).any(|h| *h > 1);
-                    found.push((Run { y, x0: x, x1: x + length - 1 }, strong));
-                    x += length;
+        runs_of_heights(&heights, y, found);
+    })
+}
+
+/// The same of values that are already (v − background)/rms, row by row, both signs.
+pub(crate) fn groups_of_signal(
+    signal: &[f64],
+    columns: usize,
+    outline: f64,
+    detection: f64,
+) -> Vec<Vec<Run>> {
+    let mut heights: Vec<u8> = Vec::new();
+    let rows = signal.len() / columns.max(1);
+    connected_runs(rows, |y, found| {
+        let row = signal.get(y * columns..(y + 1) * columns).unwrap_or(&[]);
+        heights.clear();
+        heights.resize(columns, 0);
+        for (values, heights) in row.chunks(LANES).zip(heights.chunks_mut(LANES)) {
+            let above = values.first_chunk::<LANES>().is_none_or(|values| {
+                values.iter().fold(0u32, |above, v| above | u32::from(v.abs() >= outline)) > 0
+            });
+            if above {
+                for (v, height) in values.iter().zip(heights) {
+                    *height = u8::from(v.abs() >= outline) + u8::from(v.abs() >= detection);
                 }
             }
         }
+        runs_of_heights(&heights, y, found);
     })
+}
+
+/// Runs of one row: a height is 0 below the outline, 1 above it, 2 above the detection
+/// threshold.
+fn runs_of_heights(heights: &[u8], y: usize, found: &mut Vec<(Run, bool)>) {
+    let mut x = 0;
+    while let Some(rest) = heights.get(x..) {
+        // Empty sky is skipped eight pixels at a time.
+        if rest.first_chunk::<8>().is_some_and(|eight| u64::from_ne_bytes(*eight) == 0) {
+            x += 8;
+            continue;
+        }
+        match rest.iter().position(|h| *h > 0) {
+            None => break,
+            Some(skip) if skip > 0 => x += skip,
+            Some(_) => {
+                let length = rest.iter().position(|h| *h == 0).unwrap_or(rest.len());
+                let strong = rest.iter().take(length).any(|h| *h > 1);
+                found.push((Run { y, x0: x, x1: x + length - 1 }, strong));
+                x += length;
+            }
+        }
+    }
 }
 
 /// Joins runs that touch (8 neighbours) into groups, row by row, and returns the groups of

@@ -20,6 +20,21 @@ pub fn sort_ascending(values: &mut [f64]) {
     }
 }
 
+/// Σ a b in eight lanes, over the shorter length.
+pub(crate) fn dot(a: &[f64], b: &[f64]) -> f64 {
+    let shared = a.len().min(b.len());
+    let (a, b) = (a.get(..shared).unwrap_or(&[]), b.get(..shared).unwrap_or(&[]));
+    let mut lanes = [0.0; 8];
+    let (a8, a_rest) = a.as_chunks::<8>();
+    let (b8, b_rest) = b.as_chunks::<8>();
+    for (a, b) in a8.iter().zip(b8) {
+        for lane in 0..8 {
+            lanes[lane] += a[lane] * b[lane];
+        }
+    }
+    lanes.iter().sum::<f64>() + a_rest.iter().zip(b_rest).map(|(a, b)| a * b).sum::<f64>()
+}
+
 /// How many values are present (not NaN), and their range.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub(crate) struct PresentRange {
@@ -238,7 +253,7 @@ impl SortedSample {
 }
 
 /// Share of the first window that later ones are expected to hold.
-const INNER_SHARE: f64 = 0.7;
+const INNER_SHARE: f64 = 0.8;
 
 /// Moments within a window that changes little from call to call: what lies deep inside the
 /// first window is summed once, the few values beyond are looked at each time.
@@ -281,15 +296,16 @@ impl ClipWindow {
         let (chunks, rest) = values.as_chunks::<LANES>();
         for chunk in chunks {
             let d = chunk.map(|v| v - centre);
-            let inside = d.map(|d| d.abs() <= inner);
-            let kept: [f64; LANES] =
-                std::array::from_fn(|lane| if inside[lane] { d[lane] } else { 0.0 });
+            let mut inside = 0u32;
             for lane in 0..LANES {
-                sums[lane] += kept[lane];
-                squares[lane] += kept[lane] * kept[lane];
+                let kept = if d[lane].abs() <= inner { d[lane] } else { 0.0 };
+                sums[lane] += kept;
+                squares[lane] += kept * kept;
+                inside += u32::from(d[lane].abs() <= inner);
             }
-            if inside != [true; LANES] {
-                let outer = chunk.iter().zip(inside).filter(|(_, inside)| !inside);
+            if inside < LANES as u32 {
+                let outer =
+                    chunk.iter().zip(d).filter(|(_, d)| d.abs().is_nan() || d.abs() > inner);
                 self.beyond.extend(outer.map(|(v, _)| *v));
             }
         }

@@ -1,8 +1,8 @@
 //! The error of a weighted sum of pixels.
 
-use super::{Noise, NoiseCorrelation, dot};
+use super::{Noise, NoiseCorrelation};
 use crate::grid::{Grid, PixelMask};
-use crate::stats::{mad_sigma, median};
+use crate::stats::{dot, mad_sigma, median};
 
 /// Most products (lags × pixels) summed one by one; larger apertures use Σ C alone.
 const MOST_PRODUCTS: usize = 40_000_000;

@@ -11,10 +11,6 @@ use crate::grid::{Grid, PixelMask};
 const STEPS_PER_RMS: f64 = 512.0;
 /// Residuals beyond this many rms are cut to it.
 const CUT_SIGMA: f64 = 4.0;
-/// Pixels whose products fit 32 bits together: 496 (4 · 512)² < 2³¹.
-const CHUNK: usize = 496;
-/// Lags whose sums are taken together: one reading of the first row serves all.
-const LAGS_AT_ONCE: usize = 4;
 /// The largest number below a half: added, it rounds to the nearest where the rest is cut off.
 const BELOW_HALF: f64 = 0.499_999_999_999_999_94;
 
@@ -223,8 +219,7 @@ pub fn measure_correlation(
 struct Window {
     columns: usize,
     rows: usize,
-    /// Zeros lie before the first row and after each: as many as the largest lag, and those
-    /// taken together with it.
+    /// Zeros lie before the first row and after each: as many as the largest lag.
     values: Vec<i16>,
     gap: usize,
     /// Columns rounded up to a multiple of 16, and the distance from row to row.
@@ -251,7 +246,7 @@ impl Window {
         let ((left, columns), (top, rows)) = (centred(grid.columns()), centred(grid.rows()));
         let words = columns.div_ceil(64) + 1;
         let padded = columns.next_multiple_of(16);
-        let gap = reach + LAGS_AT_ONCE - 1;
+        let gap = reach;
         let stride = padded + gap;
         let mut values = vec![0i16; gap + stride * rows];
         let mut bits = vec![0u64; words * rows];
@@ -330,48 +325,34 @@ impl Window {
         pairs as f64
     }
 
-    /// Sums of products at the K lags (dx, dy), (dx + 1, dy) ... with dy ≥ 0.
-    fn products<const K: usize>(&self, dx: isize, dy: usize) -> [i64; K] {
-        let mut sums = [0; K];
-        for y in 0..self.rows.saturating_sub(dy) {
-            // Beyond the window a row holds zeros: its whole length can be summed.
-            let a = self.gap + y * self.stride;
-            let b = (self.gap + (y + dy) * self.stride).saturating_add_signed(dx);
-            let (first, second) = (a..a + self.padded, b..b + self.padded + K - 1);
-            dots(&self.values[first], &self.values[second], &mut sums);
-        }
-        sums
+    /// Sum of products at a lag with dy ≥ 0.
+    fn pair_sum(&self, dx: isize, dy: usize) -> i64 {
+        let row = |y: usize| self.gap + y * self.stride;
+        (0..self.rows.saturating_sub(dy))
+            .map(|y| {
+                // Beyond the window a row holds zeros: its whole length can be summed.
+                let (a, b) = (row(y), row(y + dy).saturating_add_signed(dx));
+                dot(&self.values[a..a + self.padded], &self.values[b..b + self.padded])
+            })
+            .sum()
     }
 
     fn correlate(&self, reach: usize) -> NoiseCorrelation {
         let mut values = vec![0.0; (2 * reach + 1) * (2 * reach + 1)];
         let mut pairs = vec![0.0; values.len()];
-        let power = self.products::<1>(0, 0)[0] as f64 / self.pairs(0, 0).max(1.0);
+        let power = self.pair_sum(0, 0) as f64 / self.pairs(0, 0).max(1.0);
         if power.is_nan() || power <= 0.0 {
             return NoiseCorrelation::white();
         }
-        let far = reach as isize;
-        for dy in 0..=far {
-            let mut first = if dy == 0 { 0 } else { -far };
-            while first <= far {
-                let row = dy.unsigned_abs();
-                let sums = if first == far {
-                    let [last] = self.products(first, row);
-                    [last, 0, 0, 0]
-                } else {
-                    self.products(first, row)
-                };
-                for (dx, sum) in (first..=far).zip(sums) {
-                    let count = self.pairs(dx, row);
-                    let c = if count >= 30.0 { sum as f64 / count / power } else { 0.0 };
-                    for (dx, dy) in [(dx, dy), (-dx, -dy)] {
-                        if let Some(i) = lag_index(reach, dx, dy) {
-                            values[i] = c;
-                            pairs[i] = count;
-                        }
-                    }
+        for (dx, dy) in lags(reach).filter(|(dx, dy)| (*dy, *dx) >= (0, 0)) {
+            let row = dy.unsigned_abs();
+            let count = self.pairs(dx, row);
+            let c = if count >= 30.0 { self.pair_sum(dx, row) as f64 / count / power } else { 0.0 };
+            for (dx, dy) in [(dx, dy), (-dx, -dy)] {
+                if let Some(i) = lag_index(reach, dx, dy) {
+                    values[i] = c;
+                    pairs[i] = count;
                 }
-                first += LAGS_AT_ONCE as isize;
             }
         }
         // Taking off the mean of N pixels lowers every coefficient by ΣC/N.
@@ -384,21 +365,19 @@ impl Window {
     }
 }
 
-/// Adds the exact sums of a(i) b(i + k) for the first K values of k; `b` is longer than `a` by
-/// K − 1.
-fn dots<const K: usize>(a: &[i16], b: &[i16], totals: &mut [i64; K]) {
-    for (n, a) in a.chunks(CHUNK).enumerate() {
-        let mut sums = [0i32; K];
-        let b = b.get(n * CHUNK..).unwrap_or(&[]);
-        for (a, b) in a.iter().zip(b.array_windows::<K>()) {
-            for k in 0..K {
-                sums[k] += i32::from(*a) * i32::from(b[k]);
-            }
-        }
-        for (total, sum) in totals.iter_mut().zip(sums) {
-            *total += i64::from(sum);
-        }
-    }
+/// Exact sum of products of two slices of equal length, a multiple of 16.
+fn dot(a: &[i16], b: &[i16]) -> i64 {
+    let ((a32, a_rest), (b32, b_rest)) = (a.as_chunks::<32>(), b.as_chunks::<32>());
+    let ((a16, _), (b16, _)) = (a_rest.as_chunks::<16>(), b_rest.as_chunks::<16>());
+    let long = a32.iter().zip(b32).map(|(a, b)| products(a, b));
+    let short = a16.iter().zip(b16).map(|(a, b)| products(a, b));
+    long.chain(short).map(i64::from).sum()
+}
+
+/// Sum of products, which fits 32 bits: 32 (4 · 512)² < 2³¹. Written out at this length it
+/// becomes eight products an instruction.
+fn products<const N: usize>(a: &[i16; N], b: &[i16; N]) -> i32 {
+    a.iter().zip(b).map(|(a, b)| i32::from(*a) * i32::from(*b)).sum()
 }
 
 /// Bits set in both `a` and `b` moved down by `shift`.

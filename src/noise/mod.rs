@@ -205,21 +205,6 @@ fn measure(
     tiles::estimate(field, settings, hints)
 }
 
-/// Σ a b in eight lanes, over the shorter length.
-fn dot(a: &[f64], b: &[f64]) -> f64 {
-    let shared = a.len().min(b.len());
-    let (a, b) = (a.get(..shared).unwrap_or(&[]), b.get(..shared).unwrap_or(&[]));
-    let mut lanes = [0.0; 8];
-    let (a8, a_rest) = a.as_chunks::<8>();
-    let (b8, b_rest) = b.as_chunks::<8>();
-    for (a, b) in a8.iter().zip(b8) {
-        for lane in 0..8 {
-            lanes[lane] += a[lane] * b[lane];
-        }
-    }
-    lanes.iter().sum::<f64>() + a_rest.iter().zip(b_rest).map(|(a, b)| a * b).sum::<f64>()
-}
-
 /// Smallest rms that the number format can show (uniform rounding error of one step).
 pub(crate) fn quantisation_floor(hints: &NoiseHints) -> f64 {
     let step = hints.quantisation_step;
@@ -241,14 +226,19 @@ pub fn source_mask(
     settings: &NoiseSettings,
     grow_px: f64,
 ) -> PixelMask {
-    let mut mask = PixelMask::new(grid.columns(), grid.rows());
     let (outline, detection) = (settings.outline_sigma, settings.detection_sigma);
-    for group in groups_above(grid, noise, outline.min(detection), detection, true) {
+    let groups = groups_above(grid, noise, outline.min(detection), detection, true);
+    grown_mask(&groups, grid.columns(), grid.rows(), grow_px)
+}
+
+fn grown_mask(groups: &[Vec<Run>], columns: usize, rows: usize, grow_px: f64) -> PixelMask {
+    let mut mask = PixelMask::new(columns, rows);
+    for group in groups {
         // The faint wings of a wide source are wide: a fifth of its radius leads a Gaussian
         // of 500 rms from 3 to 0.3 rms.
         let area: usize = group.iter().map(Run::len).sum();
         let radius = (area as f64 / std::f64::consts::PI).sqrt();
-        for run in &group {
+        for run in group {
             mask.set_run_grown(run.y, run.x0, run.x1, grow_px.max(0.2 * radius));
         }
     }

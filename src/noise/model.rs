@@ -26,6 +26,10 @@ pub struct Noise {
     pub source_mask: PixelMask,
 }
 
+/// Pixels of a row that are worked out together.
+const LANES: usize = 8;
+const STEPS: [f64; LANES] = [0.0, 1.0, 2.0, 3.0, 4.0, 5.0, 6.0, 7.0];
+
 impl Noise {
     /// The same background and rms everywhere. A background that is not finite becomes 0,
     /// an rms that is not finite and positive becomes the smallest positive number.
@@ -88,33 +92,37 @@ impl Noise {
     }
 
     fn line_into(&self, nodes: &[f64], y: usize, out: &mut Vec<f64>) {
-        out.clear();
         let width = self.nodes_x.len();
         let (j, u) = bracket(&self.nodes_y, y as f64);
         let j1 = (j + 1).min(self.nodes_y.len() - 1);
-        let at = |i: usize| {
-            let low = nodes.get(j * width + i).copied().unwrap_or(0.0);
-            let high = nodes.get(j1 * width + i).copied().unwrap_or(0.0);
-            low + u * (high - low)
-        };
-        let first = at(0);
+        let row = |j: usize| nodes.get(j * width..(j + 1) * width).unwrap_or(&[]);
+        let mut values = row(j).iter().zip(row(j1)).map(|(low, high)| low + u * (high - low));
+        let first = values.next().unwrap_or(0.0);
         // Even noise has one value along the row.
-        if (1..width).all(|i| at(i).to_bits() == first.to_bits()) {
+        if values.clone().all(|value| value.to_bits() == first.to_bits()) {
+            out.clear();
             out.resize(self.columns, first);
             return;
         }
-        for i in 0..width - 1 {
-            let (x0, x1) = (self.nodes_x[i], self.nodes_x[i + 1]);
-            let (a, b) = (at(i), at(i + 1));
-            let end = if i + 2 == width {
-                self.columns
-            } else {
-                ((x1.floor().max(0.0) as usize) + 1).min(self.columns)
-            };
+        // Whole blocks are written: what runs beyond an interval is written again by the next
+        // one, what runs beyond the map is cut off.
+        out.resize(self.columns + LANES, first);
+        let (mut start, mut a) = (0, first);
+        for (interval, b) in self.nodes_x.windows(2).zip(values) {
+            let &[x0, x1] = interval else { continue };
+            let end = ((x1.floor().max(0.0) as usize) + 1).min(self.columns);
             let slope = (b - a) / (x1 - x0);
-            // Through i32: that conversion is done for several pixels at once.
-            out.extend((out.len()..end).map(|x| a + slope * (f64::from(x as i32) - x0)));
+            let blocks = out.get_mut(start..).unwrap_or(&mut []).as_chunks_mut::<LANES>().0;
+            for block in blocks.iter_mut().take(end.saturating_sub(start).div_ceil(LANES)) {
+                let at = start as f64;
+                for (value, step) in block.iter_mut().zip(STEPS) {
+                    *value = a + slope * ((at + step) - x0);
+                }
+                start += LANES;
+            }
+            (start, a) = (end, b);
         }
+        out.truncate(self.columns);
     }
 }
 

@@ -2,9 +2,10 @@
 
 use super::smooth::{Axis, TileValue, fit_plane, node_values, points};
 use super::{Field, Noise, NoiseError, NoiseHints, NoiseSettings};
-use super::{dot, grow_px, quantisation_floor, source_mask};
+use super::{grow_px, grown_mask, quantisation_floor, source_mask};
 use crate::grid::PixelMask;
-use crate::stats::{SortedSample, clipped, median, quantile};
+use crate::regions::groups_of_signal;
+use crate::stats::{SortedSample, clipped, dot, median, quantile};
 
 /// Tiles larger than this are sampled at every second pixel of both axes in the first look.
 const FULL_SAMPLE_PX: usize = 900;
@@ -50,8 +51,8 @@ pub(super) fn estimate(
     let mut signal = Vec::with_capacity(field.values.len());
     for _ in 0..2 {
         let fwhm = reach.map(|r: Reach| r.fwhm_px);
-        let mask = source_mask(field, &noise, settings, grow_px(hints, fwhm));
-        normalised_into(field, &noise, &mask, &mut signal);
+        normalised_into(field, &noise, &mut signal);
+        mask_sources(&mut signal, field, settings, grow_px(hints, fwhm));
         let measured = measure_reach(&signal, field.columns);
         reach = Some(measured);
         let mut found = masked_look(&signal, &noise, settings, x, y, step);
@@ -180,16 +181,33 @@ fn robust_levels(quiet: &[TileValue], x: Axis, y: Axis, scale: f64) -> Vec<f64> 
         .collect()
 }
 
-/// (value − background)/rms, NaN where blank or masked.
-fn normalised_into(field: &Field, noise: &Noise, mask: &PixelMask, out: &mut Vec<f64>) {
+/// (value − background)/rms, NaN where blank.
+fn normalised_into(field: &Field, noise: &Noise, out: &mut Vec<f64>) {
     out.clear();
     let (mut background, mut rms) = (Vec::new(), Vec::new());
     for y in 0..field.rows {
         noise.row_into(y, &mut background, &mut rms);
-        let row = field.row(y).iter().zip(mask.row(y));
-        out.extend(row.zip(background.iter().zip(&rms)).map(|((value, masked), (level, rms))| {
-            if *masked { f64::NAN } else { (value - level) / rms }
-        }));
+        let row = field.row(y).iter().zip(background.iter().zip(&rms));
+        out.extend(row.map(|(value, (level, rms))| (value - level) / rms));
+    }
+}
+
+/// Makes NaN of what [`source_mask`] masks, found in the normalised values themselves.
+fn mask_sources(signal: &mut [f64], field: &Field, settings: &NoiseSettings, grow_px: f64) {
+    let (outline, detection) = (settings.outline_sigma, settings.detection_sigma);
+    let columns = field.columns;
+    let groups = groups_of_signal(signal, columns, outline.min(detection), detection);
+    if groups.is_empty() {
+        return;
+    }
+    let mask = grown_mask(&groups, columns, field.rows, grow_px);
+    for (y, line) in signal.chunks_exact_mut(columns.max(1)).enumerate() {
+        let row = mask.row(y);
+        if row.contains(&true) {
+            for (value, _) in line.iter_mut().zip(row).filter(|(_, masked)| **masked) {
+                *value = f64::NAN;
+            }
+        }
     }
 }
 

@@ -303,21 +303,22 @@ fn describe(grid: &dyn Grid, noise: &Noise, runs: Vec<Run>) -> Option<Region> {
     for run in &runs {
         if run.y != loaded {
             grid.row_into(run.y, &mut values);
-            noise.row_into(run.y, &mut background, &mut rms);
             loaded = run.y;
         }
+        noise.part_into(run.y, run.x0..run.x1 + 1, &mut background, &mut rms);
         bbox.x0 = bbox.x0.min(run.x0);
         bbox.x1 = bbox.x1.max(run.x1);
         bbox.y0 = bbox.y0.min(run.y);
         bbox.y1 = bbox.y1.max(run.y);
         area_px += run.len();
         for x in run.x0..=run.x1 {
-            let (value, signal) = (values.get(x)?, values.get(x)? - background.get(x)?);
+            let value = values.get(x)?;
+            let signal = value - background.get(x - run.x0)?;
             sum += signal;
             // Measured from the first pixel, so that a far corner loses no digits.
             moment_x += signal * (x as f64 - first.x0 as f64);
             moment_y += signal * (run.y as f64 - first.y as f64);
-            peak_snr = peak_snr.max(signal / rms.get(x)?);
+            peak_snr = peak_snr.max(signal / rms.get(x - run.x0)?);
             let order = value.total_cmp(&brightest.0);
             if order.is_gt() {
                 brightest = (*value, x as f64, run.y as f64, 1.0);

@@ -65,12 +65,13 @@ impl ApertureWeights {
 
     /// The same window with every weight times the local rms.
     fn times_rms(&self, noise: &Noise) -> Self {
-        let (mut background, mut rms) = (Vec::new(), Vec::new());
+        let mut rms = Vec::new();
         let mut weights = Vec::with_capacity(self.weights.len());
+        let first = self.x0.min(noise.columns.saturating_sub(1));
         for j in 0..self.height {
-            noise.row_into(self.y0 + j, &mut background, &mut rms);
+            noise.rms_part_into(self.y0 + j, first..self.x0 + self.width, &mut rms);
             for (i, w) in self.row(j).iter().enumerate() {
-                let rms = rms.get(self.x0 + i).or(rms.last()).copied().unwrap_or(0.0);
+                let rms = rms.get(self.x0 - first + i).or(rms.last()).copied().unwrap_or(0.0);
                 weights.push(w * rms);
             }
         }

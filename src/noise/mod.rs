@@ -326,14 +326,18 @@ pub fn rms_at_distance(
     };
     let (mut row, mut background, mut rms) = (Vec::new(), Vec::new(), Vec::new());
     let mut found = Vec::new();
+    let columns = in_range(centre.0 - outer_px, centre.0 + outer_px, grid.columns());
     for y in in_range(centre.1 - outer_px, centre.1 + outer_px, grid.rows()) {
         grid.row_into(y, &mut row);
-        noise.row_into(y, &mut background, &mut rms);
+        noise.part_into(y, columns.clone(), &mut background, &mut rms);
         let dy = y as f64 - centre.1;
-        for x in in_range(centre.0 - outer_px, centre.0 + outer_px, grid.columns()) {
+        for x in columns.clone() {
             let d = (x as f64 - centre.0).hypot(dy);
             let wanted = d >= inner_px && d <= outer_px && !mask.get(x, y);
-            let residual = row.get(x).zip(background.get(x)).map(|(value, level)| value - level);
+            let residual = row
+                .get(x)
+                .zip(background.get(x - columns.start))
+                .map(|(value, level)| value - level);
             found.extend(residual.filter(|r| wanted && !r.is_nan()));
         }
     }

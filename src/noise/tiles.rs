@@ -69,7 +69,8 @@ pub(super) fn estimate(
     Ok(noise)
 }
 
-fn axis(size: usize, settings: &NoiseSettings, hints: &NoiseHints) -> Axis {
+/// The windows of one axis: at least ten beams wide.
+pub(super) fn axis(size: usize, settings: &NoiseSettings, hints: &NoiseHints) -> Axis {
     let wide = match hints.beam_px {
         Some((major, _)) if major.is_finite() && major > 0.0 => settings.tile_beams * major,
         _ => settings.unknown_beam_tile_px as f64,

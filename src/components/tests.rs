@@ -381,6 +381,7 @@ fn crumbs_and_halos_are_no_ends() {
         position_sigma: 0.3,
         peak,
         peak_sigma: 0.01,
+        signal_to_noise: 100.0 * peak,
         flux,
         flux_sigma: 0.1,
         major: (6.0, 0.1),
@@ -401,7 +402,7 @@ fn crumbs_and_halos_are_no_ends() {
     let mut more = pair.to_vec();
     more.push(at(90.0, 0.2, 0.2)); // a crumb: 2 % of the flux
     more.push(at(80.0, 0.03, 5.0)); // a halo: 3 % of the peak
-    more.push(Component { peak_sigma: 0.05, ..at(70.0, 0.2, 3.0) }); // 4σ
+    more.push(Component { signal_to_noise: 4.0, ..at(70.0, 0.2, 3.0) }); // 4 rms
     assert_eq!(outermost_separation(&more, &frame(2.0)).map(|o| o.2), Some((0, 1)));
     assert!(outermost_separation(&pair[..1], &frame(2.0)).is_none());
     assert!(outermost_separation(&[], &frame(2.0)).is_none());

@@ -12,8 +12,8 @@
 //! threshold: p further parameters, N independent samples of the noise (Schwarz 1978, Annals
 //! of Statistics 6, 461, with samples in place of pixels). χ² is per independent sample,
 //! allows for a model error of a fixed share of the brightness, and is divided by the better
-//! fit's own reduced χ² where that exceeds 1: a map with errors beyond its noise asks for
-//! more.
+//! fit's own reduced χ² near the new components where that exceeds 1: a map with errors beyond
+//! its noise asks for more.
 //!
 //! Errors are those of the linear estimator under the measured noise correlation C,
 //! (JᵀJ)⁻¹ JᵀCJ (JᵀJ)⁻¹. They hold no model error: of a smooth lobe described by two
@@ -104,6 +104,8 @@ pub struct Component {
     pub peak: f64,
     /// 1σ of the peak from noise, map unit.
     pub peak_sigma: f64,
+    /// Peak over the local rms: how high it stands, whatever it is blended with.
+    pub signal_to_noise: f64,
     /// Integral, map unit × pixels: peak · π/(4 ln 2) · major · minor / pixel area.
     pub flux: f64,
     /// 1σ of the integral from noise, map unit × pixels.
@@ -194,19 +196,26 @@ pub fn fit_components(
 }
 
 /// Distance between the two outermost components that are features of the source, its 1σ
-/// and their indices. A feature stands 5σ above the noise, holds at least 3 % of the flux of
+/// and their indices. A feature stands 5 rms above the noise, holds at least 3 % of the flux of
 /// the brightest component and reaches a twentieth of the highest peak (own thresholds, set
-/// on real survey maps). With fewer than two: `None`.
+/// on real survey maps); both are compared with the second largest where there are three or
+/// more, so that one dominant core does not outshine all others. With fewer than two: `None`.
 pub fn outermost_separation(
     components: &[Component],
     frame: &LocalFrame,
 ) -> Option<(f64, f64, (usize, usize))> {
-    let most = components.iter().map(|c| c.flux).fold(0.0, f64::max);
-    let highest = components.iter().map(|c| c.peak).fold(0.0, f64::max);
+    let reference = |of: fn(&Component) -> f64| {
+        let (first, second) = components
+            .iter()
+            .map(of)
+            .fold((0.0, 0.0), |(a, b), v| if v > a { (v, a) } else { (a, f64::max(b, v)) });
+        if components.len() > 2 { second } else { first }
+    };
+    let (most, highest) = (reference(|c| c.flux), reference(|c| c.peak));
     let features: Vec<usize> = (0..components.len())
         .filter(|&k| {
             components.get(k).is_some_and(|c| {
-                c.peak >= FEATURE_SIGMA * c.peak_sigma
+                c.signal_to_noise >= FEATURE_SIGMA
                     && c.flux >= FEATURE_FLUX * most
                     && c.peak >= FEATURE_PEAK * highest
             })
@@ -225,7 +234,7 @@ pub fn outermost_separation(
     best.filter(|(separation, sigma, _)| separation.is_finite() && sigma.is_finite())
 }
 
-/// Peak over its error of a feature.
+/// Peak over the rms of a feature.
 const FEATURE_SIGMA: f64 = 5.0;
 /// Flux of a feature over that of the brightest component.
 const FEATURE_FLUX: f64 = 0.03;
@@ -238,6 +247,8 @@ const SEARCH_EVALUATIONS: usize = 20;
 /// A local maximum starts a component where the brightness falls by this many rms towards
 /// every brighter one.
 const PROMINENCE_SIGMA: f64 = 3.0;
+/// Most residuals of one fit that are tried as a further component.
+const MOST_RESIDUALS: usize = 3;
 /// Peak below which a fitted component is dropped, in rms.
 const LEAST_PEAK_SIGMA: f64 = 2.0;
 /// Two components of like size closer than this, in beams, are one.
@@ -310,48 +321,44 @@ impl Search<'_> {
         let mut best = self.fit_and_prune(starts)?;
         let mut whole = Vec::new();
         let mut truncated = false;
-        // Whether the residual of this very fit was tried already.
-        let mut tried = false;
+        // Where the residual of this very fit was tried already.
+        let mut tried: Vec<[f64; 2]> = Vec::new();
         while self.can_gain(&best) {
-            let residual = self.pixels.highest_residual(&best.residual, self.settings.model_error);
+            let residual =
+                self.pixels.highest_residual(&best.residual, self.settings.model_error, &tried);
             let significant =
                 residual.filter(|found| found.significance > self.settings.detection_sigma);
             if best.gaussians.len() >= self.settings.most_components || self.spent >= self.budget {
                 truncated = significant.is_some();
                 break;
             }
-            let mut trials = Vec::new();
-            if let Some(found) = significant.filter(|_| !tried) {
-                tried = true;
+            let mut trials: Vec<(Vec<Gaussian>, Vec<Gaussian>, Vec<[f64; 2]>)> = Vec::new();
+            if let Some(found) = significant.filter(|_| tried.len() < MOST_RESIDUALS) {
+                tried.push(found.at);
                 let new = Gaussian::beam_shaped(found.amplitude, found.at, 1.1);
-                trials.push((best.gaussians.clone(), vec![new]));
+                trials.push((best.gaussians.clone(), vec![new], vec![found.at]));
             }
             if let Some(k) = self.longest(&best, &whole) {
                 whole.extend(best.gaussians.get(k).copied());
                 let mut others = best.gaussians.clone();
                 let two = split(&others.remove(k));
-                trials.push((others, two));
+                trials.push((others, two, Vec::new()));
             }
             if trials.is_empty() {
                 break;
             }
-            let mut accepted = false;
-            for (others, new) in trials {
+            for (others, new, places) in trials {
                 // Only what lies near the new ones moves with them.
                 let (mut free, held): (Vec<Gaussian>, Vec<Gaussian>) =
                     others.into_iter().partition(|g| new.iter().any(|n| g.is_near(n)));
                 free.extend(new);
                 if let Some(fit) = self.fit_beside(&held, free)
-                    && self.gain(&best, &fit) > self.settings.least_gain
+                    && self.gain(&best, &fit, &places) > self.settings.least_gain
                 {
                     best = fit;
-                    accepted = true;
-                    tried = false;
+                    tried.clear();
                     break;
                 }
-            }
-            if !accepted && self.longest(&best, &whole).is_none() {
-                break;
             }
         }
         Some((best, truncated))
@@ -396,13 +403,17 @@ impl Search<'_> {
         chi - 0.5 * independent > 6.0 * independent.ln().max(1.0) + self.settings.least_gain
     }
 
-    /// What the second fit gains: (χ²₁ − χ²₂)/max(1, χ²₂/N) − (p₂ − p₁) ln N.
-    fn gain(&self, first: &Fit, second: &Fit) -> f64 {
-        let chi = |fit: &Fit| self.pixels.chi_squared(&fit.residual, self.settings.model_error);
+    /// What the second fit gains: (χ²₁ − χ²₂)/max(1, χ²₂/N) − (p₂ − p₁) ln N. A component that
+    /// stands at a place of its own is judged by the reduced χ² near it: what is not yet
+    /// described elsewhere says nothing of it. Two halves of one are judged by that of the
+    /// whole source (no place).
+    fn gain(&self, first: &Fit, second: &Fit, places: &[[f64; 2]]) -> f64 {
+        let model_error = self.settings.model_error;
+        let chi = |fit: &Fit| self.pixels.chi_squared(&fit.residual, model_error);
+        let reduced = self.pixels.reduced_near(&second.residual, model_error, places);
         let independent = self.pixels.independent();
-        let (before, after) = (chi(first), chi(second));
         let more = second.gaussians.len() as f64 - first.gaussians.len() as f64;
-        (before - after) / (after / independent).max(1.0) - 6.0 * more * independent.ln().max(1.0)
+        (chi(first) - chi(second)) / reduced.max(1.0) - 6.0 * more * independent.ln().max(1.0)
     }
 
     /// Fits, drops what is no component, and fits again until nothing is dropped.
@@ -540,6 +551,7 @@ fn component(
         position_sigma,
         peak: gaussian.amplitude,
         peak_sigma,
+        signal_to_noise: gaussian.amplitude / rms.max(f64::MIN_POSITIVE),
         flux,
         flux_sigma,
         major,

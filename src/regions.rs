@@ -132,6 +132,9 @@ pub fn find_regions(grid: &dyn Grid, noise: &Noise, settings: &RegionSettings) -
     regions
 }
 
+/// Pixels of a row that are looked at together.
+const LANES: usize = 8;
+
 /// The runs of every hysteresis group of (v − background)/rms; `both_signs` takes holes as
 /// deep as the peaks too.
 pub(crate) fn groups_above(
@@ -143,36 +146,87 @@ pub(crate) fn groups_above(
 ) -> Vec<Vec<Run>> {
     let (mut values, mut background, mut rms) = (Vec::new(), Vec::new(), Vec::new());
     let mut heights: Vec<u8> = Vec::new();
+    let signal = |value: f64, background: f64| {
+        let signal = value - background;
+        if both_signs { signal.abs() } else { signal }
+    };
     connected_runs(grid.rows(), |y, found| {
         grid.row_into(y, &mut values);
         noise.row_into(y, &mut background, &mut rms);
-        // 0 below the outline, 1 above it, 2 above the detection threshold.
         heights.clear();
-        let row = values.iter().zip(&background).zip(&rms);
-        heights.extend(row.map(|((value, background), rms)| {
-            let signal = value - background;
-            let signal = if both_signs { signal.abs() } else { signal };
-            u8::from(signal >= outline * rms) + u8::from(signal >= detection * rms)
-        }));
-        let mut x = 0;
-        while let Some(rest) = heights.get(x..) {
-            // Empty sky is skipped eight pixels at a time.
-            if rest.first_chunk::<8>().is_some_and(|eight| u64::from_ne_bytes(*eight) == 0) {
-                x += 8;
-                continue;
+        heights.resize(values.len(), 0);
+        let blocks = values.chunks(LANES).zip(background.chunks(LANES)).zip(rms.chunks(LANES));
+        for (((values, background), rms), heights) in blocks.zip(heights.chunks_mut(LANES)) {
+            if let (Some(values), Some(background), Some(rms)) = (
+                values.first_chunk::<LANES>(),
+                background.first_chunk::<LANES>(),
+                rms.first_chunk::<LANES>(),
+            ) {
+                let above = (0..LANES).fold(0u32, |above, k| {
+                    above | u32::from(signal(values[k], background[k]) >= outline * rms[k])
+                });
+                if above == 0 {
+                    continue;
+                }
             }
-            match rest.iter().position(|h| *h > 0) {
-                None => break,
-                Some(skip) if skip > 0 => x += skip,
-                Some(_) => {
-                    let length = rest.iter().position(|h| *h == 0).unwrap_or(rest.len());
-                    let strong = rest.iter().take(length).any(|h| *h > 1);
-                    found.push((Run { y, x0: x, x1: x + length - 1 }, strong));
-                    x += length;
+            let row = values.iter().zip(background).zip(rms).zip(heights);
+            for (((value, background), rms), height) in row {
+                let signal = signal(*value, *background);
+                *height = u8::from(signal >= outline * rms) + u8::from(signal >= detection * rms);
+            }
+        }
+        runs_of_heights(&heights, y, found);
+    })
+}
+
+/// The same of values that are already (v − background)/rms, row by row, both signs.
+pub(crate) fn groups_of_signal(
+    signal: &[f64],
+    columns: usize,
+    outline: f64,
+    detection: f64,
+) -> Vec<Vec<Run>> {
+    let mut heights: Vec<u8> = Vec::new();
+    let rows = signal.len() / columns.max(1);
+    connected_runs(rows, |y, found| {
+        let row = signal.get(y * columns..(y + 1) * columns).unwrap_or(&[]);
+        heights.clear();
+        heights.resize(columns, 0);
+        for (values, heights) in row.chunks(LANES).zip(heights.chunks_mut(LANES)) {
+            let above = values.first_chunk::<LANES>().is_none_or(|values| {
+                values.iter().fold(0u32, |above, v| above | u32::from(v.abs() >= outline)) > 0
+            });
+            if above {
+                for (v, height) in values.iter().zip(heights) {
+                    *height = u8::from(v.abs() >= outline) + u8::from(v.abs() >= detection);
                 }
             }
         }
+        runs_of_heights(&heights, y, found);
     })
+}
+
+/// Runs of one row: a height is 0 below the outline, 1 above it, 2 above the detection
+/// threshold.
+fn runs_of_heights(heights: &[u8], y: usize, found: &mut Vec<(Run, bool)>) {
+    let mut x = 0;
+    while let Some(rest) = heights.get(x..) {
+        // Empty sky is skipped eight pixels at a time.
+        if rest.first_chunk::<8>().is_some_and(|eight| u64::from_ne_bytes(*eight) == 0) {
+            x += 8;
+            continue;
+        }
+        match rest.iter().position(|h| *h > 0) {
+            None => break,
+            Some(skip) if skip > 0 => x += skip,
+            Some(_) => {
+                let length = rest.iter().position(|h| *h == 0).unwrap_or(rest.len());
+                let strong = rest.iter().take(length).any(|h| *h > 1);
+                found.push((Run { y, x0: x, x1: x + length - 1 }, strong));
+                x += length;
+            }
+        }
+    }
 }
 
 /// Joins runs that touch (8 neighbours) into groups, row by row, and returns the groups of
@@ -249,21 +303,22 @@ fn describe(grid: &dyn Grid, noise: &Noise, runs: Vec<Run>) -> Option<Region> {
     for run in &runs {
         if run.y != loaded {
             grid.row_into(run.y, &mut values);
-            noise.row_into(run.y, &mut background, &mut rms);
             loaded = run.y;
         }
+        noise.part_into(run.y, run.x0..run.x1 + 1, &mut background, &mut rms);
         bbox.x0 = bbox.x0.min(run.x0);
         bbox.x1 = bbox.x1.max(run.x1);
         bbox.y0 = bbox.y0.min(run.y);
         bbox.y1 = bbox.y1.max(run.y);
         area_px += run.len();
         for x in run.x0..=run.x1 {
-            let (value, signal) = (values.get(x)?, values.get(x)? - background.get(x)?);
+            let value = values.get(x)?;
+            let signal = value - background.get(x - run.x0)?;
             sum += signal;
             // Measured from the first pixel, so that a far corner loses no digits.
             moment_x += signal * (x as f64 - first.x0 as f64);
             moment_y += signal * (run.y as f64 - first.y as f64);
-            peak_snr = peak_snr.max(signal / rms.get(x)?);
+            peak_snr = peak_snr.max(signal / rms.get(x - run.x0)?);
             let order = value.total_cmp(&brightest.0);
             if order.is_gt() {
                 brightest = (*value, x as f64, run.y as f64, 1.0);
@@ -333,9 +388,12 @@ pub fn local_maxima(
     for run in regions.iter().flat_map(|region| &region.runs) {
         for x in run.x0..=run.x1 {
             let value = grid.value(x, run.y);
+            // Few pixels pass this; the noise is worked out for them alone.
+            if neighbours(grid, x, run.y).any(|other| other > value) {
+                continue;
+            }
             let (fx, fy) = (x as f64, run.y as f64);
-            let enough = value - noise.background(fx, fy) >= minimum_snr * noise.rms(fx, fy);
-            if enough && !neighbours(grid, x, run.y).any(|other| other > value) {
+            if value - noise.background(fx, fy) >= minimum_snr * noise.rms(fx, fy) {
                 candidates.push((x, run.y, value));
             }
         }

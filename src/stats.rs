@@ -8,6 +8,67 @@ use crate::constants::SIGMA_PER_MAD;
 /// Most iterations a clipped estimate may take; it stops earlier when it stands still.
 const CLIP_ITERATIONS: usize = 30;
 
+/// Sorts ascending by IEEE total order (as `f64::total_cmp`): the bits are turned into whole
+/// numbers of the same order first, whose comparison is one instruction.
+pub fn sort_ascending(values: &mut [f64]) {
+    // Negative numbers run backwards in their bits; the turn is its own inverse.
+    let turned = |bits: i64| bits ^ (((bits >> 63) as u64) >> 1) as i64;
+    let mut keys: Vec<i64> = values.iter().map(|v| turned(v.to_bits() as i64)).collect();
+    keys.sort_unstable();
+    for (value, key) in values.iter_mut().zip(keys) {
+        *value = f64::from_bits(turned(key) as u64);
+    }
+}
+
+/// Σ a b in eight lanes, over the shorter length.
+pub(crate) fn dot(a: &[f64], b: &[f64]) -> f64 {
+    let shared = a.len().min(b.len());
+    let (a, b) = (a.get(..shared).unwrap_or(&[]), b.get(..shared).unwrap_or(&[]));
+    let mut lanes = [0.0; 8];
+    let (a8, a_rest) = a.as_chunks::<8>();
+    let (b8, b_rest) = b.as_chunks::<8>();
+    for (a, b) in a8.iter().zip(b8) {
+        for lane in 0..8 {
+            lanes[lane] += a[lane] * b[lane];
+        }
+    }
+    lanes.iter().sum::<f64>() + a_rest.iter().zip(b_rest).map(|(a, b)| a * b).sum::<f64>()
+}
+
+/// How many values are present (not NaN), and their range.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub(crate) struct PresentRange {
+    pub count: usize,
+    /// +∞ where none is present.
+    pub lowest: f64,
+    /// −∞ where none is present.
+    pub highest: f64,
+}
+
+impl PresentRange {
+    pub fn of(values: &[f64]) -> Self {
+        const LANES: usize = 8;
+        let mut lowest = [f64::INFINITY; LANES];
+        let mut highest = [f64::NEG_INFINITY; LANES];
+        let (chunks, rest) = values.as_chunks::<LANES>();
+        // Comparisons with NaN are false: blanks do not count.
+        let below = |a: f64, b: f64| if a < b { a } else { b };
+        let above = |a: f64, b: f64| if a > b { a } else { b };
+        for chunk in chunks {
+            for lane in 0..LANES {
+                lowest[lane] = below(chunk[lane], lowest[lane]);
+                highest[lane] = above(chunk[lane], highest[lane]);
+            }
+        }
+        let count = values.iter().map(|v| usize::from(!v.is_nan())).sum();
+        Self {
+            count,
+            lowest: lowest.iter().chain(rest).fold(f64::INFINITY, |low, v| below(*v, low)),
+            highest: highest.iter().chain(rest).fold(f64::NEG_INFINITY, |high, v| above(*v, high)),
+        }
+    }
+}
+
 /// The median: the middle value, or the mean of the two middle values. `None` when empty.
 pub fn median(values: &mut [f64]) -> Option<f64> {
     quantile(values, 0.5)
@@ -85,13 +146,15 @@ pub struct Clipped {
 /// recovered without bias. `None` where fewer than two values are left, or where the
 /// start is not finite and positive.
 pub fn clipped(values: &[f64], mean: f64, rms: f64, clip: f64) -> Option<Clipped> {
-    iterate_clip(mean, rms, clip, None, |centre, half| window_moments(values, centre, half))
+    let mut window = ClipWindow::default();
+    iterate_clip(mean, rms, clip, None, |centre, half| window.moments(values, centre, half))
 }
 
 /// The rms about a fixed centre by iterative clipping, as [`clipped`].
 pub fn clipped_about(values: &[f64], centre: f64, rms: f64, clip: f64) -> Option<Clipped> {
+    let mut window = ClipWindow::default();
     iterate_clip(centre, rms, clip, Some(centre), |centre, half| {
-        window_moments(values, centre, half)
+        window.moments(values, centre, half)
     })
 }
 
@@ -110,7 +173,7 @@ impl SortedSample {
         values.retain(|v| v.is_finite());
         std::mem::swap(&mut self.values, values);
         values.clear();
-        self.values.sort_unstable_by(f64::total_cmp);
+        sort_ascending(&mut self.values);
         // Squares about the median lose no digits to a large offset.
         self.origin = sorted_quantile(&self.values, 0.5).unwrap_or(0.0);
         let (mut sum, mut square) = (0.0, 0.0);
@@ -189,33 +252,75 @@ impl SortedSample {
     }
 }
 
-/// Count, sum and sum of squares of the deviations from `centre` within ±`half`.
-fn window_moments(values: &[f64], centre: f64, half: f64) -> (usize, f64, f64) {
-    const LANES: usize = 8;
-    let mut counts = [0.0; LANES];
-    let mut sums = [0.0; LANES];
-    let mut squares = [0.0; LANES];
-    let (chunks, rest) = values.as_chunks::<LANES>();
-    for chunk in chunks {
-        for lane in 0..LANES {
-            let d = chunk[lane] - centre;
-            let inside = d.abs() <= half;
-            let kept = if inside { d } else { 0.0 };
-            counts[lane] += if inside { 1.0 } else { 0.0 };
-            sums[lane] += kept;
-            squares[lane] += kept * kept;
+/// Share of the first window that later ones are expected to hold.
+const INNER_SHARE: f64 = 0.8;
+
+/// Moments within a window that changes little from call to call: what lies deep inside the
+/// first window is summed once, the few values beyond are looked at each time.
+#[derive(Default)]
+struct ClipWindow {
+    /// Centre and half width of the inner part; 0 wide before the first call.
+    centre: f64,
+    inner: f64,
+    /// Count, sum and sum of squares of its deviations from that centre.
+    moments: (f64, f64, f64),
+    /// The values outside it.
+    beyond: Vec<f64>,
+}
+
+impl ClipWindow {
+    /// Count, sum and sum of squares of the deviations from `centre` within ±`half`.
+    fn moments(&mut self, values: &[f64], centre: f64, half: f64) -> (usize, f64, f64) {
+        let shift = centre - self.centre;
+        if self.inner <= 0.0 || shift.abs() + self.inner > half {
+            self.split(values, centre, INNER_SHARE * half);
         }
+        let (count, sum, square) = self.moments;
+        let shift = centre - self.centre;
+        // Moments about the new centre from those about the first.
+        let about =
+            (count, sum - count * shift, square - 2.0 * shift * sum + count * shift * shift);
+        let all = self.beyond.iter().fold(about, |total, value| {
+            let d = value - centre;
+            let kept = if d.abs() <= half { d } else { 0.0 };
+            let one = if d.abs() <= half { 1.0 } else { 0.0 };
+            (total.0 + one, total.1 + kept, total.2 + kept * kept)
+        });
+        (all.0 as usize, all.1, all.2)
     }
-    let mut total = (counts.iter().sum::<f64>(), sums.iter().sum(), squares.iter().sum());
-    for value in rest {
-        let d = value - centre;
-        if d.abs() <= half {
-            total.0 += 1.0;
-            total.1 += d;
-            total.2 += d * d;
+
+    fn split(&mut self, values: &[f64], centre: f64, inner: f64) {
+        const LANES: usize = 8;
+        let (mut sums, mut squares) = ([0.0; LANES], [0.0; LANES]);
+        self.beyond.clear();
+        let (chunks, rest) = values.as_chunks::<LANES>();
+        for chunk in chunks {
+            let d = chunk.map(|v| v - centre);
+            let mut inside = 0u32;
+            for lane in 0..LANES {
+                let kept = if d[lane].abs() <= inner { d[lane] } else { 0.0 };
+                sums[lane] += kept;
+                squares[lane] += kept * kept;
+                inside += u32::from(d[lane].abs() <= inner);
+            }
+            if inside < LANES as u32 {
+                let outer =
+                    chunk.iter().zip(d).filter(|(_, d)| d.abs().is_nan() || d.abs() > inner);
+                self.beyond.extend(outer.map(|(v, _)| *v));
+            }
         }
+        let mut total = (sums.iter().sum::<f64>(), squares.iter().sum::<f64>());
+        for value in rest {
+            let d = value - centre;
+            if d.abs() <= inner {
+                total = (total.0 + d, total.1 + d * d);
+            } else {
+                self.beyond.push(*value);
+            }
+        }
+        let count = (values.len() - self.beyond.len()) as f64;
+        (self.centre, self.inner, self.moments) = (centre, inner, (count, total.0, total.1));
     }
-    (total.0 as usize, total.1, total.2)
 }
 
 /// The clipping loop over any source of window moments.
@@ -224,7 +329,7 @@ fn iterate_clip(
     rms: f64,
     clip: f64,
     fixed: Option<f64>,
-    moments: impl Fn(f64, f64) -> (usize, f64, f64),
+    mut moments: impl FnMut(f64, f64) -> (usize, f64, f64),
 ) -> Option<Clipped> {
     if !(mean.is_finite() && rms.is_finite() && rms > 0.0 && clip > 0.0) {
         return None;
@@ -305,6 +410,17 @@ mod tests {
         assert_eq!(median(&mut []), None);
         assert_eq!(quantile(&mut [1.0], 1.5), None);
         assert_eq!(median(&mut [f64::NAN]), None);
+    }
+
+    #[test]
+    fn sorting_by_bits_is_the_total_order() {
+        let mut values: Vec<f64> = (0..500).map(|i| f64::from(i * 7919 % 501) - 250.0).collect();
+        values.extend([0.0, -0.0, f64::INFINITY, f64::NEG_INFINITY, f64::NAN, -f64::NAN, 1e-310]);
+        let mut twin = values.clone();
+        twin.sort_by(f64::total_cmp);
+        sort_ascending(&mut values);
+        let bits = |v: &[f64]| v.iter().map(|v| v.to_bits()).collect::<Vec<_>>();
+        assert_eq!(bits(&values), bits(&twin));
     }
 
     #[test]

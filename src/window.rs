@@ -80,9 +80,8 @@ impl Window {
         if !(x > -1.0 && y > -1.0 && x < self.columns() as f64 && y < self.rows() as f64) {
             return None;
         }
-        let (cx, cy) = (x.floor(), y.floor());
-        let (fx, fy) = (x - cx, y - cy);
-        let (c, r) = (cx as i64, cy as i64);
+        let (c, r) = (below(x), below(y));
+        let (fx, fy) = (x - c as f64, y - r as f64);
         let mut sum = 0.0;
         for (dr, wy) in [(0, 1.0 - fy), (1, fy)] {
             for (dc, wx) in [(0, 1.0 - fx), (1, fx)] {
@@ -100,7 +99,7 @@ impl Window {
     /// next to unusable cells; `None` where that fails too.
     pub fn cubic(&self, at: Pixel) -> Option<f64> {
         let (x, y) = (at.x - self.x0 as f64, at.y - self.y0 as f64);
-        let (cx, cy) = (x.floor(), y.floor());
+        let (cx, cy) = (below(x) as f64, below(y) as f64);
         if !(x >= 1.0
             && y >= 1.0
             && cx + 2.0 < self.columns() as f64
@@ -136,6 +135,13 @@ impl Grid for Window {
     fn value(&self, x: usize, y: usize) -> f64 {
         self.brightness.get((y, x)).copied().unwrap_or(f64::NAN)
     }
+}
+
+/// The largest whole number not above `v` (a position in a window: far inside the range of
+/// whole numbers).
+fn below(v: f64) -> i64 {
+    let towards_zero = v as i64;
+    towards_zero - i64::from(towards_zero as f64 > v)
 }
 
 /// The four weights of cubic convolution at fraction `t` between the middle two samples.

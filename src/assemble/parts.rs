@@ -17,10 +17,27 @@ pub(super) fn component_separation(findings: &Findings) -> Measurement {
     let beam = findings.observed.working_beam.mean_fwhm();
     let many = findings.components.components.len() > 2;
     let systematic = if many { 0.05 * beam * std::f64::consts::SQRT_2 } else { 0.0 };
-    outermost_separation(&findings.components.components, &findings.model.frame)
-        .map_or(Measurement::missing(Because::TooFewFeatures), |(separation, sigma, _)| {
-            Measurement::symmetric(separation, sigma.hypot(systematic))
-        })
+    let components = &findings.components.components;
+    let frame = &findings.model.frame;
+    let Some((separation, sigma, ends)) = outermost_separation(components, frame) else {
+        return Measurement::missing(Because::TooFewFeatures);
+    };
+    let minus = sigma.hypot(systematic);
+    let (Some(one), Some(other)) = (components.get(ends.0), components.get(ends.1)) else {
+        return Measurement::symmetric(separation, minus);
+    };
+    // An end much wider than the beam may hide the feature that ends the source: as likely
+    // anywhere in its outer half, within 0.34 of its width with 68 %.
+    let axis_deg = frame.offset(one.pixel).minus(frame.offset(other.pixel)).position_angle_deg();
+    let hidden = |c: &Component| {
+        let (sin, cos) = (axis_deg - c.pa_deg).to_radians().sin_cos();
+        let along = (c.major.0 * cos).powi(2) + (c.minor.0 * sin).powi(2);
+        0.34 * (along - 2.0 * beam * beam).max(0.0).sqrt()
+    };
+    let plus = minus.hypot(hidden(one).hypot(hidden(other)));
+    let found = Measurement::value(separation, minus, plus);
+    // Of a source that leaves the map an end may lie outside.
+    if findings.model.cut_off { found.as_lower_limit(findings.settings.confidence) } else { found }
 }
 
 /// The fitted components, brightest flux first.

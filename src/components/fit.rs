@@ -2,6 +2,7 @@
 
 use super::pixels::Pixels;
 use crate::noise::NoiseCorrelation;
+use crate::stats::dot;
 
 /// 4 ln 2: a Gaussian falls to half at half its FWHM.
 const FOUR_LN_2: f64 = 4.0 * std::f64::consts::LN_2;
@@ -149,7 +150,8 @@ struct Stamp {
     centre: [f64; 2],
     longest: f64,
     index: Vec<u32>,
-    slope: Vec<[f64; 6]>,
+    /// Of each parameter one list.
+    slope: [Vec<f64>; 6],
 }
 
 impl Stamp {
@@ -174,9 +176,9 @@ fn evaluate(pixels: &Pixels, target: &[f64], gaussians: &[Gaussian]) -> State {
         .iter()
         .map(|gaussian| {
             let stamp = stamp(pixels, gaussian);
-            for (&i, slope) in stamp.index.iter().zip(&stamp.slope) {
+            for (&i, g) in stamp.index.iter().zip(&stamp.slope[0]) {
                 if let Some(r) = residual.get_mut(i as usize) {
-                    *r -= gaussian.amplitude * slope[0];
+                    *r -= gaussian.amplitude * g;
                 }
             }
             stamp
@@ -211,6 +213,9 @@ fn stamp(pixels: &Pixels, gaussian: &Gaussian) -> Stamp {
     let columns = range(centre_x, a.0.hypot(b.0), pixels.columns);
     let rows = range(centre_y, a.1.hypot(b.1), pixels.rows);
     let (s, l) = (axes.short, axes.long);
+    let room = columns.len() * rows.len();
+    out.index.reserve(room);
+    let [mut along, mut across, mut g] = [(); 3].map(|()| Vec::with_capacity(room));
     for row in rows {
         let start = row * pixels.columns;
         let Some(line) = pixels.index.get(start + columns.start..start + columns.end) else {
@@ -228,20 +233,31 @@ fn stamp(pixels: &Pixels, gaussian: &Gaussian) -> Stamp {
             if squared > reach {
                 continue;
             }
-            let g = (-FOUR_LN_2 * squared).exp();
-            let k = 2.0 * FOUR_LN_2 * gaussian.amplitude * g;
             out.index.push(i as u32);
-            out.slope.push([
-                g,
-                k * axes.narrow * us,
-                k * axes.wide * ul,
-                -k * us * ds,
-                -k * ul * dl,
-                -k * (axes.narrow + axes.wide) * ds * dl,
-            ]);
+            along.push(ds);
+            across.push(dl);
+            g.push((-FOUR_LN_2 * squared).exp());
         }
     }
+    // Derivatives list by list: many pixels at a time.
+    let scale = 2.0 * FOUR_LN_2 * gaussian.amplitude;
+    let (n, w) = (axes.narrow, axes.wide);
+    let lists = [
+        derivative(&g, &along, |ds| scale * n * n * ds),
+        derivative(&g, &across, |dl| scale * w * w * dl),
+        derivative(&g, &along, |ds| -scale * n * ds * ds),
+        derivative(&g, &across, |dl| -scale * w * dl * dl),
+    ];
+    let both: Vec<f64> = along.iter().zip(&across).map(|(ds, dl)| ds * dl).collect();
+    let mixed = derivative(&g, &both, |product| -scale * (n + w) * product);
+    let [d1, d2, d3, d4] = lists;
+    out.slope = [g, d1, d2, d3, d4, mixed];
     out
+}
+
+/// The Gaussian times a function of the place, pixel by pixel.
+fn derivative(g: &[f64], place: &[f64], of: impl Fn(f64) -> f64) -> Vec<f64> {
+    g.iter().zip(place).map(|(g, at)| g * of(*at)).collect()
 }
 
 /// JᵀJ (row-major) and Jᵀ residual.
@@ -250,36 +266,33 @@ fn normal_equations(pixels: &Pixels, residual: &[f64], stamps: &[Stamp]) -> (Vec
     let mut matrix = vec![0.0; count * count];
     let mut right = vec![0.0; count];
     let mut place = vec![-1i32; pixels.value.len()];
+    let mut shared = Shared::default();
     for (a, first) in stamps.iter().enumerate() {
+        let own: Vec<f64> = first.index.iter().map(|&i| residual[i as usize]).collect();
+        for (p, slope) in first.slope.iter().enumerate() {
+            right[6 * a + p] = dot(slope, &own);
+            for (q, other) in first.slope.iter().enumerate().skip(p) {
+                let v = dot(slope, other);
+                matrix[(6 * a + p) * count + 6 * a + q] = v;
+                matrix[(6 * a + q) * count + 6 * a + p] = v;
+            }
+        }
+        if stamps.iter().skip(a + 1).all(|second| !first.meets(second)) {
+            continue;
+        }
         for (n, &i) in first.index.iter().enumerate() {
             place[i as usize] = n as i32;
         }
-        let mut sums = [0.0; 6];
-        for (&i, slope) in first.index.iter().zip(&first.slope) {
-            let r = residual[i as usize];
-            for (sum, v) in sums.iter_mut().zip(slope) {
-                *sum += v * r;
-            }
-        }
-        right[6 * a..6 * a + 6].copy_from_slice(&sums);
-        for (b, second) in stamps.iter().enumerate().skip(a) {
+        for (b, second) in stamps.iter().enumerate().skip(a + 1) {
             if !first.meets(second) {
                 continue;
             }
-            let mut block = [[0.0; 6]; 6];
-            for (&i, slope) in second.index.iter().zip(&second.slope) {
-                let Ok(n) = usize::try_from(place[i as usize]) else { continue };
-                let own = &first.slope[n];
-                for (line, u) in block.iter_mut().zip(own) {
-                    for (sum, v) in line.iter_mut().zip(slope) {
-                        *sum += u * v;
-                    }
-                }
-            }
-            for (p, line) in block.iter().enumerate() {
-                for (q, v) in line.iter().enumerate() {
-                    matrix[(6 * a + p) * count + 6 * b + q] = *v;
-                    matrix[(6 * b + q) * count + 6 * a + p] = *v;
+            shared.gather(&place, first, second);
+            for (p, u) in shared.first.iter().enumerate() {
+                for (q, w) in shared.second.iter().enumerate() {
+                    let v = dot(u, w);
+                    matrix[(6 * a + p) * count + 6 * b + q] = v;
+                    matrix[(6 * b + q) * count + 6 * a + p] = v;
                 }
             }
         }
@@ -288,6 +301,33 @@ fn normal_equations(pixels: &Pixels, residual: &[f64], stamps: &[Stamp]) -> (Vec
         }
     }
     (matrix, right)
+}
+
+/// The derivatives of two Gaussians at the pixels both have.
+#[derive(Default)]
+struct Shared {
+    at: Vec<(u32, u32)>,
+    first: [Vec<f64>; 6],
+    second: [Vec<f64>; 6],
+}
+
+impl Shared {
+    /// `place`: of each pixel its number in the first list, negative where it is not there.
+    fn gather(&mut self, place: &[i32], first: &Stamp, second: &Stamp) {
+        self.at.clear();
+        let numbered = second.index.iter().zip(0u32..);
+        self.at.extend(
+            numbered.filter_map(|(&i, m)| u32::try_from(place[i as usize]).ok().map(|n| (n, m))),
+        );
+        for (list, slope) in self.first.iter_mut().zip(&first.slope) {
+            list.clear();
+            list.extend(self.at.iter().map(|(n, _)| slope[*n as usize]));
+        }
+        for (list, slope) in self.second.iter_mut().zip(&second.slope) {
+            list.clear();
+            list.extend(self.at.iter().map(|(_, m)| slope[*m as usize]));
+        }
+    }
 }
 
 /// Lower triangular factor of a symmetric positive-definite matrix; `None` where it is none.
@@ -528,10 +568,11 @@ struct Near {
 impl Near {
     fn of(pixels: &Pixels, stamp: &Stamp, cut: f64) -> Self {
         let (mut cells, mut slopes) = (Vec::new(), Vec::new());
-        for (&i, slope) in stamp.index.iter().zip(&stamp.slope) {
-            if slope[0] < cut {
+        for (n, &i) in stamp.index.iter().enumerate() {
+            if stamp.slope[0][n] < cut {
                 continue;
             }
+            let slope: [f64; 6] = std::array::from_fn(|k| stamp.slope[k][n]);
             if let (Some(&cell), Some(sigma)) =
                 (pixels.cell.get(i as usize), pixels.sigma_at(i as usize))
             {

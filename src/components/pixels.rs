@@ -8,6 +8,8 @@ use crate::window::Window;
 
 /// More pixels than this are thinned.
 const MOST_PIXELS: usize = 8_000;
+/// What lies this near to a place, in beams, is described with it.
+const NEAR_BEAMS: f64 = 1.5;
 
 /// Usable pixels of the source, grown by half a beam, with offsets in beams.
 pub(super) struct Pixels {
@@ -240,6 +242,28 @@ impl Pixels {
         sum / self.per_sample
     }
 
+    /// χ² over the number of samples of the pixels within [`NEAR_BEAMS`] of the places; of all
+    /// pixels where there is no place.
+    pub(super) fn reduced_near(
+        &self,
+        residual: &[f64],
+        model_error: f64,
+        places: &[[f64; 2]],
+    ) -> f64 {
+        let near = |at: &[f64; 2]| {
+            let close = |p: &[f64; 2]| (p[0] - at[0]).hypot(p[1] - at[1]) <= NEAR_BEAMS;
+            places.is_empty() || places.iter().any(close)
+        };
+        let (mut sum, mut count) = (0.0, 0.0);
+        for (k, _) in self.position.iter().enumerate().filter(|(_, at)| near(at)) {
+            let (r, value, sigma) = (residual[k], self.value[k], self.sigma[k]);
+            let square = sigma * sigma + (model_error * value).powi(2);
+            sum += r * r / square.max(f64::MIN_POSITIVE);
+            count += 1.0;
+        }
+        sum / f64::max(count, 1.0)
+    }
+
     /// Root mean square of residual over noise.
     pub(super) fn residual_over_noise(&self, residual: &[f64]) -> f64 {
         let sum: f64 = residual
@@ -252,11 +276,12 @@ impl Pixels {
     }
 
     /// The place where a beam-shaped component would stand highest above noise and model
-    /// error.
+    /// error, at least [`NEAR_BEAMS`] from the places tried before.
     pub(super) fn highest_residual(
         &self,
         residual: &[f64],
         model_error: f64,
+        tried: &[[f64; 2]],
     ) -> Option<ResidualPeak> {
         let mut best: Option<ResidualPeak> = None;
         for (k, &(column, row)) in self.cell.iter().enumerate() {
@@ -274,7 +299,8 @@ impl Pixels {
             else {
                 continue;
             };
-            if !(norm > 0.0 && sum > 0.0) {
+            let again = tried.iter().any(|p| (p[0] - at[0]).hypot(p[1] - at[1]) < NEAR_BEAMS);
+            if !(norm > 0.0 && sum > 0.0) || again {
                 continue;
             }
             let amplitude = sum / norm;

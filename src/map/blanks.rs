@@ -5,7 +5,7 @@
 //! connected block of identical values cannot be noise. It need not be blank, though: a map
 //! clipped from below has its floor there, and a saturated one its ceiling.
 
-use std::cmp::Ordering;
+use crate::stats::{PresentRange, sort_ascending};
 
 /// Pixels a block of identical values needs before it counts.
 const MIN_BLOCK_PIXELS: usize = 64;
@@ -20,6 +20,8 @@ const MASKED_FRACTION: f64 = 0.5;
 /// Below this fraction of equal neighbours quantised noise has no large blocks: half of the
 /// bonds of a square lattice must be joined before it hangs together (H. Kesten 1980).
 const MAX_EQUAL_NEIGHBOURS: f64 = 0.25;
+/// Pixels looked at together where equal neighbours are looked for.
+const STRETCH: usize = 16;
 /// Most different fill values looked for.
 const MAX_FILL_VALUES: usize = 32;
 /// Most neighbours of the floor whose heights above it are compared.
@@ -50,33 +52,30 @@ struct Extremes {
 impl Extremes {
     /// `None` where there are fewer than two different values.
     fn of(stored: &[f64]) -> Option<Self> {
-        let (mut lowest, mut lowest_count) = (f64::INFINITY, 0);
-        let (mut second_lowest, mut second_lowest_count) = (f64::INFINITY, 0);
-        let (mut highest, mut second_highest) = (f64::NEG_INFINITY, f64::NEG_INFINITY);
-        let mut finite = 0;
-        for &value in stored.iter().filter(|v| v.is_finite()) {
-            finite += 1;
-            match (value.total_cmp(&lowest), value.total_cmp(&second_lowest)) {
-                (Ordering::Less, _) => {
-                    (second_lowest, second_lowest_count) = (lowest, lowest_count);
-                    (lowest, lowest_count) = (value, 1);
-                }
-                (Ordering::Equal, _) => lowest_count += 1,
-                (_, Ordering::Less) => (second_lowest, second_lowest_count) = (value, 1),
-                (_, Ordering::Equal) => second_lowest_count += 1,
-                _ => {}
-            }
-            if value > highest {
-                (second_highest, highest) = (highest, value);
-            } else if value < highest && value > second_highest {
-                second_highest = value;
+        let PresentRange { count: finite, lowest, highest } = PresentRange::of(stored);
+        // Plain passes over the array, each of them many pixels at a time.
+        const LANES: usize = 8;
+        let (mut low, mut high) = ([f64::INFINITY; LANES], [f64::NEG_INFINITY; LANES]);
+        let (chunks, rest) = stored.as_chunks::<LANES>();
+        let above = |v: f64, low: f64| if v > lowest && v < low { v } else { low };
+        let below = |v: f64, high: f64| if v < highest && v > high { v } else { high };
+        for chunk in chunks {
+            for lane in 0..LANES {
+                low[lane] = above(chunk[lane], low[lane]);
+                high[lane] = below(chunk[lane], high[lane]);
             }
         }
-        (second_lowest.is_finite() && second_highest.is_finite()).then_some(Self {
+        let second_lowest = low.iter().chain(rest).fold(f64::INFINITY, |low, v| above(*v, low));
+        let second_highest =
+            high.iter().chain(rest).fold(f64::NEG_INFINITY, |high, v| below(*v, high));
+        let count = |level: f64| -> usize {
+            stored.iter().map(|v| usize::from(*v >= level && *v <= level)).sum()
+        };
+        (second_lowest.is_finite() && second_highest.is_finite()).then(|| Self {
             lowest,
-            lowest_count,
+            lowest_count: count(lowest),
             second_lowest,
-            second_lowest_count,
+            second_lowest_count: count(second_lowest),
             highest,
             second_highest,
             finite,
@@ -211,7 +210,7 @@ fn begins_at_floor(stored: &[f64], columns: usize, floor: f64) -> bool {
     for (&a, &b) in stored.iter().zip(stored.iter().skip(columns)) {
         compare(a, b);
     }
-    gaps.sort_by(f64::total_cmp);
+    sort_ascending(&mut gaps);
     match (gaps.get(gaps.len() / 10), gaps.get(gaps.len() / 2)) {
         (Some(tenth), Some(median)) => *tenth < 0.3 * median,
         _ => false,
@@ -231,7 +230,25 @@ fn blocks(stored: &[f64], columns: usize) -> Vec<Block> {
     }
     let mut seen = vec![false; stored.len()];
     let mut open = Vec::new();
-    for (start, &value) in stored.iter().enumerate() {
+    // Most stretches hold no equal neighbours: told many pixels at a time.
+    let dull = |start: usize| {
+        let one = stored.get(start..).and_then(|rest| rest.first_chunk::<STRETCH>());
+        let right = stored.get(start + 1..).and_then(|rest| rest.first_chunk::<STRETCH>());
+        let down = stored.get(start + columns..).and_then(|rest| rest.first_chunk::<STRETCH>());
+        let (Some(one), Some(right), Some(down)) = (one, right, down) else { return false };
+        let mut equal = 0u32;
+        for k in 0..STRETCH {
+            let same = |other: f64| one[k] >= other && one[k] <= other;
+            equal |= u32::from(same(right[k]) | same(down[k]));
+        }
+        equal == 0
+    };
+    let starts = (0..stored.len())
+        .step_by(STRETCH)
+        .filter(|start| !dull(*start))
+        .flat_map(|start| start..(start + STRETCH).min(stored.len()));
+    for start in starts {
+        let value = stored[start];
         let begins = |i: usize| stored.get(i).is_some_and(|v| v.total_cmp(&value).is_eq());
         if !value.is_finite() || seen.get(start) != Some(&false) {
             continue;

@@ -19,6 +19,7 @@ mod words;
 use schemars::JsonSchema;
 use serde::{Deserialize, Serialize};
 
+use crate::stats::PresentRange;
 use crate::units::Pixel;
 pub use beam::Beam;
 use description::{BrightnessUnit, DescriptionError, MapDescription, Rows, ValueTransfer};
@@ -123,15 +124,19 @@ impl SkyMap {
 
         let input = InputFacts::of(&stored);
         let is_single = matches!(stored.samples, Samples::F32(_));
-        let mut values = match std::mem::replace(&mut stored.samples, Samples::F64(Vec::new())) {
-            Samples::F32(numbers) => numbers.iter().map(|&n| f64::from(n)).collect(),
-            Samples::F64(numbers) => numbers,
-        };
         let blank = BlankValue::new(&description, &stored);
-        for value in &mut values {
-            // Adding zero takes the sign from −0.
-            *value = if value.is_finite() && !blank.is(*value) { *value + 0.0 } else { f64::NAN };
-        }
+        // Adding zero takes the sign from −0.
+        let cleaned = |value: f64| {
+            if value.is_finite() && !blank.is(value) { value + 0.0 } else { f64::NAN }
+        };
+        let mut values: Vec<f64> =
+            match std::mem::replace(&mut stored.samples, Samples::F64(Vec::new())) {
+                Samples::F32(numbers) => numbers.iter().map(|&n| cleaned(f64::from(n))).collect(),
+                Samples::F64(mut numbers) => {
+                    numbers.iter_mut().for_each(|value| *value = cleaned(*value));
+                    numbers
+                }
+            };
         let step = quantisation::step(&stored, &values);
         let findings = blanks::inspect(&values, columns, step, stored.is_integer());
         if !findings.fill_values.is_empty() {
@@ -164,8 +169,10 @@ impl SkyMap {
                 *value = if linear.is_finite() { linear } else { f64::NAN };
             }
         }
-        check_brightness(&values)?;
-        let blank_count = values.iter().filter(|v| v.is_nan()).count();
+        // Infinities became blank above.
+        let range = PresentRange::of(&values);
+        check_brightness(&range)?;
+        let blank_count = values.len() - range.count;
         let samples = if is_single && unchanged {
             // Exact: the values are the stored single-precision numbers or blank.
             Samples::F32(values.iter().map(|&value| value as f32).collect())
@@ -368,8 +375,8 @@ fn check_beam(beam: Option<Beam>, geometry: &SkyGeometry) -> Result<(), Descript
     }
 }
 
-fn check_brightness(values: &[f64]) -> Result<(), DescriptionError> {
-    let largest = values.iter().filter(|v| v.is_finite()).fold(0.0, |a: f64, v| a.max(v.abs()));
+fn check_brightness(range: &PresentRange) -> Result<(), DescriptionError> {
+    let largest = (-range.lowest).max(range.highest).max(0.0);
     // Zero everywhere is another complaint's matter.
     if largest > 0.0 && !BRIGHTEST.contains(&largest) {
         let (&least, &most) = (BRIGHTEST.start(), BRIGHTEST.end());

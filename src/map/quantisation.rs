@@ -2,6 +2,7 @@
 //! were integers once, absent in most maps. The noise of a map is never below step / √12.
 
 use super::read::StoredArray;
+use crate::stats::sort_ascending;
 
 /// Values looked at in long arrays.
 const SAMPLE: usize = 20_000;
@@ -42,7 +43,7 @@ fn sorted_sample(stored: &[f64]) -> Vec<f64> {
     let stride = (stored.len() / SAMPLE) | 1;
     let mut sample: Vec<f64> =
         stored.iter().step_by(stride).copied().filter(|v| v.is_finite()).collect();
-    sample.sort_by(f64::total_cmp);
+    sort_ascending(&mut sample);
     sample
 }
 

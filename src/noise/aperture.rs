@@ -2,7 +2,7 @@
 
 use super::{Noise, NoiseCorrelation};
 use crate::grid::{Grid, PixelMask};
-use crate::stats::{mad_sigma, median};
+use crate::stats::{dot, mad_sigma, median};
 
 /// Most products (lags × pixels) summed one by one; larger apertures use Σ C alone.
 const MOST_PRODUCTS: usize = 40_000_000;
@@ -65,12 +65,13 @@ impl ApertureWeights {
 
     /// The same window with every weight times the local rms.
     fn times_rms(&self, noise: &Noise) -> Self {
-        let (mut background, mut rms) = (Vec::new(), Vec::new());
+        let mut rms = Vec::new();
         let mut weights = Vec::with_capacity(self.weights.len());
+        let first = self.x0.min(noise.columns.saturating_sub(1));
         for j in 0..self.height {
-            noise.row_into(self.y0 + j, &mut background, &mut rms);
+            noise.rms_part_into(self.y0 + j, first..self.x0 + self.width, &mut rms);
             for (i, w) in self.row(j).iter().enumerate() {
-                let rms = rms.get(self.x0 + i).or(rms.last()).copied().unwrap_or(0.0);
+                let rms = rms.get(self.x0 - first + i).or(rms.last()).copied().unwrap_or(0.0);
                 weights.push(w * rms);
             }
         }
@@ -115,18 +116,6 @@ impl ApertureWeights {
         })
         .sum()
     }
-}
-
-fn dot(a: &[f64], b: &[f64]) -> f64 {
-    let mut lanes = [0.0; 8];
-    let (a8, a_rest) = a.as_chunks::<8>();
-    let (b8, b_rest) = b.as_chunks::<8>();
-    for (a, b) in a8.iter().zip(b8) {
-        for lane in 0..8 {
-            lanes[lane] += a[lane] * b[lane];
-        }
-    }
-    lanes.iter().sum::<f64>() + a_rest.iter().zip(b_rest).map(|(a, b)| a * b).sum::<f64>()
 }
 
 impl NoiseCorrelation {

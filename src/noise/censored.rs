@@ -2,10 +2,12 @@
 
 use statrs::distribution::{ContinuousCDF, Normal};
 
+use super::smooth::{Axis, TileValue, node_values};
+use super::tiles::axis;
 use super::{Field, Noise, NoiseError, NoiseHints, NoiseSettings};
 use super::{grow_px, quantisation_floor, source_mask};
 use crate::grid::PixelMask;
-use crate::stats::sorted_quantile;
+use crate::stats::{sort_ascending, sorted_quantile};
 
 /// Most of the pixels that may sit at the floor while the rest still shows the noise.
 const MOST_AT_FLOOR: f64 = 0.8;
@@ -23,14 +25,55 @@ pub(super) fn floor_of(field: &Field, hints: &NoiseHints) -> Option<f64> {
     }
     if step > 0.0 {
         let next = field.values.iter().filter(|v| **v > edge && **v <= edge + step).count();
-        return (share >= 0.02 && at_floor > next && at_floor >= 10).then_some(floor);
+        if share >= 0.02 && at_floor > next && at_floor >= 10 {
+            return Some(floor);
+        }
+        return filled_level(field, step);
     }
     (at_floor >= 10 && share >= 0.005).then_some(floor)
 }
 
-/// Background and rms of a map cut off at `floor`, one value for the whole map: a straight
+/// The level 0 of a quantised map whose lower values were all replaced by 0 (not by the lowest
+/// value left): its values end sharply below, and what is missing there is found in excess at 0.
+fn filled_level(field: &Field, step: f64) -> Option<f64> {
+    // The level 0 as it is stored: steps counted from the lowest one.
+    let steps = (-field.lowest / step).round();
+    let zero = field.lowest + steps * step;
+    if !(steps >= 1.0 && zero.abs() < 0.25 * step) {
+        return None;
+    }
+    // Φ⁻¹ of the share of values below an edge between two levels.
+    let normal = Normal::standard();
+    let deviate = |edge: f64| {
+        let below: usize = field.values.iter().map(|v| usize::from(*v <= edge)).sum();
+        let share = below as f64 / field.present as f64;
+        (share > 0.0 && share < 1.0).then(|| normal.inverse_cdf(share))
+    };
+    let first = field.lowest + 0.5 * step;
+    let (q0, q1) = (deviate(first)?, deviate(first + step)?);
+    // Edges of a Gaussian lie at equal deviates: as many values as that should lie below.
+    let missing = normal.cdf(2.0 * q0 - q1) * field.present as f64;
+    if q0 < LEAST_LOWEST || missing < LEAST_MISSING {
+        return None;
+    }
+    let above = (deviate(zero + 0.5 * step)?, deviate(zero + 1.5 * step)?);
+    let spacing = above.1 - above.0;
+    let excess = normal.cdf(above.0 - spacing) - normal.cdf(deviate(zero - 0.5 * step)?);
+    let gone = normal.cdf(above.0 - (steps + 1.0) * spacing);
+    (excess > 0.5 * gone).then_some(zero)
+}
+
+/// Deviate of the share of the lowest level of a map that ends sharply: 0.5 %. The lowest of
+/// 10⁴ Gaussian values or more, in steps that show them, is rarer.
+const LEAST_LOWEST: f64 = -2.58;
+/// Values that must be missing below it: ten independent samples of a wide beam.
+const LEAST_MISSING: f64 = 200.0;
+
+/// Background and rms of a map cut off at `floor`. One value for the whole map first: a straight
 /// line through (Gaussian quantile, value) of the values above the floor. The first fit
-/// uses the lower 60 % of them; emission found with it is masked for the second.
+/// uses the lower 60 % of them; emission found with it is masked for the second. Then the rms
+/// of each tile, from the share of its values far above the background, as far as the tiles
+/// differ by more than their errors.
 ///
 /// # Errors
 /// [`NoiseError::NotVisible`] where more than 80 % of the pixels are at the floor, or
@@ -86,7 +129,69 @@ pub(super) fn estimate(
         model.source_mask = mask.clone();
         noise = Some(model);
     }
-    noise.ok_or(NoiseError::NoEmptySky { found: 0, needed: settings.minimum_pixels })
+    let mut noise =
+        noise.ok_or(NoiseError::NoEmptySky { found: 0, needed: settings.minimum_pixels })?;
+    let (x, y) = (axis(field.columns, settings, hints), axis(field.rows, settings, hints));
+    let even = Noise { source_mask: PixelMask::default(), ..noise.clone() };
+    for _ in 0..2 {
+        // Masked with an even rms, the noisiest places would miss their highest values.
+        let tiles = tile_rms(field, &noise.source_mask, &even, hints, floor, (x, y));
+        let Some(nodes) = node_values(&tiles, x, y, true) else { break };
+        (noise.nodes_x, noise.nodes_y) = (x.nodes(), y.nodes());
+        noise.background_nodes = vec![even.global_background; nodes.len()];
+        let rms = |log: &f64| (even.global_rms * libm::exp(*log)).max(lowest_rms);
+        noise.rms_nodes = nodes.iter().map(rms).collect();
+        noise.source_mask = source_mask(field, &noise, settings, grow_px(hints, None));
+    }
+    Ok(noise)
+}
+
+/// Logarithm of each tile's rms over that of the whole map, with its error: from the share of
+/// values above 1.3 rms of the whole map, or above the next edge between two steps.
+fn tile_rms(
+    field: &Field,
+    mask: &PixelMask,
+    even: &Noise,
+    hints: &NoiseHints,
+    floor: f64,
+    (x, y): (Axis, Axis),
+) -> Vec<TileValue> {
+    let (level, rms) = (even.global_background, even.global_rms);
+    let step = hints.quantisation_step.max(0.0);
+    let lowest_edge = floor + 0.5 * step;
+    let wanted = (level + 1.3 * rms).max(lowest_edge);
+    let edge = if step > 0.0 {
+        lowest_edge + ((wanted - lowest_edge) / step).round() * step
+    } else {
+        wanted
+    };
+    let normal = Normal::standard();
+    // Pixels per independent sample: the beam's area.
+    let per_sample = hints.beam_px.map_or(20.0, |(a, b)| crate::constants::GAUSSIAN_AREA * a * b);
+    let tile = |columns: std::ops::Range<usize>, rows: std::ops::Range<usize>| {
+        let (mut present, mut above) = (0usize, 0usize);
+        for row in rows {
+            let line = field.row(row).get(columns.clone())?;
+            for (value, masked) in line.iter().zip(mask.row(row).get(columns.clone())?) {
+                present += usize::from(!*masked && !value.is_nan());
+                above += usize::from(!*masked && *value > edge);
+            }
+        }
+        let samples = present as f64 / per_sample.max(1.0);
+        let share = above as f64 / present.max(1) as f64;
+        if samples < 5.0 || share <= 0.0 || share > 0.4 {
+            return None;
+        }
+        let q = -normal.inverse_cdf(share);
+        let density = libm::exp(-0.5 * q * q) / (2.0 * std::f64::consts::PI).sqrt();
+        let error = (share * (1.0 - share) / samples).sqrt() / (density * q);
+        let log = libm::log((edge - level) / (q * rms));
+        (log.is_finite() && error.is_finite()).then_some((log, error))
+    };
+    (0..y.count)
+        .flat_map(|j| (0..x.count).map(move |i| (i, j)))
+        .map(|(i, j)| tile(x.window(i), y.window(j)))
+        .collect()
 }
 
 /// The unmasked values above `edge`, sorted, and the number of those not above it.
@@ -105,7 +210,7 @@ fn split(field: &Field, mask: &PixelMask, edge: f64) -> (Vec<f64>, usize) {
             }
         }
     }
-    above.sort_unstable_by(f64::total_cmp);
+    sort_ascending(&mut above);
     (above, at_floor)
 }
 
@@ -221,7 +326,7 @@ pub(super) fn check_for_cut_to_blank(field: &Field) -> Result<(), NoiseError> {
         return Ok(());
     }
     let mut sorted: Vec<f64> = field.values.iter().copied().filter(|v| !v.is_nan()).collect();
-    sorted.sort_unstable_by(f64::total_cmp);
+    sort_ascending(&mut sorted);
     let at = |q| sorted_quantile(&sorted, q).unwrap_or(0.0);
     let (low, middle) = (at(0.16), at(0.5));
     // Gaussian values reach 2.5 rms below the middle in 100 samples; a cut distribution

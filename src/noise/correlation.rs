@@ -11,8 +11,8 @@ use crate::grid::{Grid, PixelMask};
 const STEPS_PER_RMS: f64 = 512.0;
 /// Residuals beyond this many rms are cut to it.
 const CUT_SIGMA: f64 = 4.0;
-/// Pixels whose products fit 32 bits together: 496 (4 · 512)² < 2³¹.
-const CHUNK: usize = 496;
+/// The largest number below a half: added, it rounds to the nearest where the rest is cut off.
+const BELOW_HALF: f64 = 0.499_999_999_999_999_94;
 
 /// How the correlation is measured.
 #[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize, JsonSchema)]
@@ -47,11 +47,14 @@ pub struct KernelEllipse {
 }
 
 impl KernelEllipse {
-    /// The correlation of white noise smoothed with this kernel: a Gaussian √2 as wide,
-    /// 0 where it is below 10⁻⁶.
-    fn correlation(&self, dx: isize, dy: isize) -> f64 {
+    /// The correlation of white noise smoothed with this kernel at a lag (dx, dy): a Gaussian
+    /// √2 as wide, 0 where it is below 10⁻⁶.
+    fn correlation(self) -> impl Fn(isize, isize) -> f64 {
         let (sin, cos) = libm::sincos(self.angle_deg.to_radians());
-        let (dx, dy) = (dx as f64, dy as f64);
+        move |dx, dy| self.correlation_at((dx as f64, dy as f64), (sin, cos))
+    }
+
+    fn correlation_at(&self, (dx, dy): (f64, f64), (sin, cos): (f64, f64)) -> f64 {
         let u = (dx * cos + dy * sin) / self.major_px;
         let v = (dy * cos - dx * sin) / self.minor_px;
         let c = libm::exp(-2.0 * std::f64::consts::LN_2 * (u * u + v * v));
@@ -92,7 +95,8 @@ impl NoiseCorrelation {
             return Self::white();
         }
         let reach = (2.7 * kernel.major_px).ceil().max(1.0) as usize;
-        let values = lags(reach).map(|(dx, dy)| kernel.correlation(dx, dy)).collect();
+        let correlation = kernel.correlation();
+        let values = lags(reach).map(|(dx, dy)| correlation(dx, dy)).collect();
         let mut out = Self::from_measured(reach, values, &[], usize::MAX);
         out.kernel = Some(kernel);
         out
@@ -215,15 +219,19 @@ pub fn measure_correlation(
 struct Window {
     columns: usize,
     rows: usize,
+    /// Zeros lie before the first row and after each: as many as the largest lag.
     values: Vec<i16>,
+    gap: usize,
     /// Columns rounded up to a multiple of 16, and the distance from row to row.
     padded: usize,
     stride: usize,
+    /// Which pixels are usable, in rows where not all are.
     words: usize,
     bits: Vec<u64>,
     usable: usize,
-    /// Rows in which every pixel is usable.
-    whole: Vec<bool>,
+    /// Of each row the number of usable pixels left of each column and of all; empty where
+    /// every pixel is usable.
+    counts: Vec<Vec<u32>>,
 }
 
 impl Window {
@@ -238,72 +246,108 @@ impl Window {
         let ((left, columns), (top, rows)) = (centred(grid.columns()), centred(grid.rows()));
         let words = columns.div_ceil(64) + 1;
         let padded = columns.next_multiple_of(16);
-        let stride = padded + reach;
-        let mut values = vec![0i16; stride * rows];
+        let gap = reach;
+        let stride = padded + gap;
+        let mut values = vec![0i16; gap + stride * rows];
         let mut bits = vec![0u64; words * rows];
         let mut usable = 0;
-        let mut whole = Vec::with_capacity(rows);
+        let mut counts = Vec::with_capacity(rows);
         let (mut row, mut background, mut rms) = (Vec::new(), Vec::new(), Vec::new());
         for y in 0..rows {
             grid.row_into(top + y, &mut row);
             noise.row_into(top + y, &mut background, &mut rms);
-            let masked = mask.row(top + y);
-            let before = usable;
-            for x in 0..columns {
-                let at = left + x;
-                let (Some(value), Some(level), Some(rms)) =
-                    (row.get(at), background.get(at), rms.get(at))
-                else {
-                    continue;
-                };
+            let part = left..left + columns;
+            let (Some(row), Some(background), Some(rms)) =
+                (row.get(part.clone()), background.get(part.clone()), rms.get(part.clone()))
+            else {
+                counts.push(vec![0; columns + 1]);
+                continue;
+            };
+            let start = gap + y * stride;
+            let rounded = &mut values[start..start + columns];
+            let mut blanks = 0;
+            for (out, (value, (level, rms))) in
+                rounded.iter_mut().zip(row.iter().zip(background.iter().zip(rms)))
+            {
                 let signal = (value - level) / rms;
-                if signal.is_nan() || masked.get(at).copied().unwrap_or(false) {
-                    continue;
-                }
-                let cut = signal.clamp(-CUT_SIGMA, CUT_SIGMA);
-                values[y * stride + x] = (cut * STEPS_PER_RMS).round() as i16;
-                bits[y * words + x / 64] |= 1 << (x % 64);
-                usable += 1;
+                blanks += usize::from(signal.is_nan());
+                let cut = signal.clamp(-CUT_SIGMA, CUT_SIGMA) * STEPS_PER_RMS;
+                // To the nearest, halves away from zero: NaN becomes 0.
+                *out = (cut + BELOW_HALF.copysign(cut)) as i32 as i16;
             }
-            whole.push(usable - before == columns);
+            let masked = mask.row(top + y).get(part).unwrap_or(&[]);
+            if blanks == 0 && !masked.contains(&true) {
+                usable += columns;
+                counts.push(Vec::new());
+                continue;
+            }
+            let mut left_of = vec![0u32];
+            let mut count = 0;
+            for (x, out) in rounded.iter_mut().enumerate() {
+                let blank = ((row[x] - background[x]) / rms[x]).is_nan();
+                if blank || masked.get(x).copied().unwrap_or(false) {
+                    *out = 0;
+                } else {
+                    bits[y * words + x / 64] |= 1 << (x % 64);
+                    count += 1;
+                }
+                left_of.push(count);
+            }
+            usable += count as usize;
+            counts.push(left_of);
         }
-        Self { columns, rows, values, padded, stride, words, bits, usable, whole }
+        Self { columns, rows, values, gap, padded, stride, words, bits, usable, counts }
     }
 
-    /// Sum of products and number of pairs at a lag with dy ≥ 0.
-    fn pair_sums(&self, dx: isize, dy: usize) -> (i64, f64) {
+    /// Number of pairs of usable pixels at a lag with dy ≥ 0.
+    fn pairs(&self, dx: isize, dy: usize) -> f64 {
         let shift = dx.unsigned_abs();
         let width = self.columns.saturating_sub(shift);
+        // Columns of the first row whose partner lies in the window, and of their partners.
         let (a0, b0) = if dx >= 0 { (0, shift) } else { (shift, 0) };
-        let (mut sum, mut pairs) = (0i64, 0u64);
+        let within =
+            |counts: &[u32], start: usize| u64::from(counts[start + width] - counts[start]);
+        let mut pairs = 0u64;
         for y in 0..self.rows.saturating_sub(dy) {
-            // Beyond the window a row holds zeros: its whole length can be summed.
-            let (a, b) = (y * self.stride + a0, (y + dy) * self.stride + b0);
-            sum += dot(&self.values[a..a + self.padded], &self.values[b..b + self.padded]);
-            if self.whole[y] && self.whole[y + dy] {
-                pairs += width as u64;
-            } else {
-                let (low, high) =
-                    (&self.bits[y * self.words..], &self.bits[(y + dy) * self.words..]);
-                // The row whose pixels lie further right is shifted down onto the other.
-                let (still, moved) = if dx >= 0 { (low, high) } else { (high, low) };
-                pairs += common_bits(&still[..self.words], &moved[..self.words], shift);
-            }
+            pairs += match (&self.counts[y][..], &self.counts[y + dy][..]) {
+                ([], []) => width as u64,
+                (first, []) => within(first, a0),
+                ([], second) => within(second, b0),
+                _ => {
+                    let (low, high) =
+                        (&self.bits[y * self.words..], &self.bits[(y + dy) * self.words..]);
+                    // The row whose pixels lie further right is shifted down onto the other.
+                    let (still, moved) = if dx >= 0 { (low, high) } else { (high, low) };
+                    common_bits(&still[..self.words], &moved[..self.words], shift)
+                }
+            };
         }
-        (sum, pairs as f64)
+        pairs as f64
+    }
+
+    /// Sum of products at a lag with dy ≥ 0.
+    fn pair_sum(&self, dx: isize, dy: usize) -> i64 {
+        let row = |y: usize| self.gap + y * self.stride;
+        (0..self.rows.saturating_sub(dy))
+            .map(|y| {
+                // Beyond the window a row holds zeros: its whole length can be summed.
+                let (a, b) = (row(y), row(y + dy).saturating_add_signed(dx));
+                dot(&self.values[a..a + self.padded], &self.values[b..b + self.padded])
+            })
+            .sum()
     }
 
     fn correlate(&self, reach: usize) -> NoiseCorrelation {
         let mut values = vec![0.0; (2 * reach + 1) * (2 * reach + 1)];
         let mut pairs = vec![0.0; values.len()];
-        let (zero, count) = self.pair_sums(0, 0);
-        let power = zero as f64 / count.max(1.0);
+        let power = self.pair_sum(0, 0) as f64 / self.pairs(0, 0).max(1.0);
         if power.is_nan() || power <= 0.0 {
             return NoiseCorrelation::white();
         }
         for (dx, dy) in lags(reach).filter(|(dx, dy)| (*dy, *dx) >= (0, 0)) {
-            let (sum, count) = self.pair_sums(dx, dy.unsigned_abs());
-            let c = if count >= 30.0 { sum as f64 / count / power } else { 0.0 };
+            let row = dy.unsigned_abs();
+            let count = self.pairs(dx, row);
+            let c = if count >= 30.0 { self.pair_sum(dx, row) as f64 / count / power } else { 0.0 };
             for (dx, dy) in [(dx, dy), (-dx, -dy)] {
                 if let Some(i) = lag_index(reach, dx, dy) {
                     values[i] = c;
@@ -321,17 +365,19 @@ impl Window {
     }
 }
 
-/// Exact sum of products of two slices of equal length.
+/// Exact sum of products of two slices of equal length, a multiple of 16.
 fn dot(a: &[i16], b: &[i16]) -> i64 {
-    let mut total = 0;
-    for (a, b) in a.chunks(CHUNK).zip(b.chunks(CHUNK)) {
-        let mut sum = 0i32;
-        for (a, b) in a.iter().zip(b) {
-            sum += i32::from(*a) * i32::from(*b);
-        }
-        total += i64::from(sum);
-    }
-    total
+    let ((a32, a_rest), (b32, b_rest)) = (a.as_chunks::<32>(), b.as_chunks::<32>());
+    let ((a16, _), (b16, _)) = (a_rest.as_chunks::<16>(), b_rest.as_chunks::<16>());
+    let long = a32.iter().zip(b32).map(|(a, b)| products(a, b));
+    let short = a16.iter().zip(b16).map(|(a, b)| products(a, b));
+    long.chain(short).map(i64::from).sum()
+}
+
+/// Sum of products, which fits 32 bits: 32 (4 · 512)² < 2³¹. Written out at this length it
+/// becomes eight products an instruction.
+fn products<const N: usize>(a: &[i16; N], b: &[i16; N]) -> i32 {
+    a.iter().zip(b).map(|(a, b)| i32::from(*a) * i32::from(*b)).sum()
 }
 
 /// Bits set in both `a` and `b` moved down by `shift`.
@@ -435,12 +481,13 @@ fn significant(
     };
     let row_means: Vec<f64> = (-half..=half).map(|dy| line(true, dy)).collect();
     let column_means: Vec<f64> = (-half..=half).map(|dx| line(false, dx)).collect();
+    let tail = kernel.map(KernelEllipse::correlation);
     for (i, (dx, dy)) in lags(reach).enumerate() {
         if !widened[i] && kept[i].abs() <= 0.0 {
             let (r, c) = (row_means[(dy + half) as usize], column_means[(dx + half) as usize]);
             kept[i] = if r.abs() >= c.abs() { r } else { c };
             if kept[i].abs() <= 0.0 {
-                kept[i] = kernel.map_or(0.0, |kernel| kernel.correlation(dx, dy));
+                kept[i] = tail.as_ref().map_or(0.0, |tail| tail(dx, dy));
             }
         }
     }

@@ -26,7 +26,7 @@ use thiserror::Error;
 
 use crate::grid::{Grid, PixelMask};
 use crate::regions::{Run, groups_above};
-use crate::stats::{clipped_about, mad_sigma};
+use crate::stats::{PresentRange, clipped_about, mad_sigma};
 
 /// How background and rms are measured.
 #[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize, JsonSchema)]
@@ -226,14 +226,19 @@ pub fn source_mask(
     settings: &NoiseSettings,
     grow_px: f64,
 ) -> PixelMask {
-    let mut mask = PixelMask::new(grid.columns(), grid.rows());
     let (outline, detection) = (settings.outline_sigma, settings.detection_sigma);
-    for group in groups_above(grid, noise, outline.min(detection), detection, true) {
+    let groups = groups_above(grid, noise, outline.min(detection), detection, true);
+    grown_mask(&groups, grid.columns(), grid.rows(), grow_px)
+}
+
+fn grown_mask(groups: &[Vec<Run>], columns: usize, rows: usize, grow_px: f64) -> PixelMask {
+    let mut mask = PixelMask::new(columns, rows);
+    for group in groups {
         // The faint wings of a wide source are wide: a fifth of its radius leads a Gaussian
         // of 500 rms from 3 to 0.3 rms.
         let area: usize = group.iter().map(Run::len).sum();
         let radius = (area as f64 / std::f64::consts::PI).sqrt();
-        for run in &group {
+        for run in group {
             mask.set_run_grown(run.y, run.x0, run.x1, grow_px.max(0.2 * radius));
         }
     }
@@ -260,12 +265,10 @@ impl Field {
         for y in 0..rows {
             grid.row_into(y, &mut row);
             row.resize(columns, f64::NAN);
-            for value in &row {
-                // Comparisons with NaN are false: blanks do not count.
-                present += usize::from(!value.is_nan());
-                lowest = if *value < lowest { *value } else { lowest };
-                highest = if *value > highest { *value } else { highest };
-            }
+            let range = PresentRange::of(&row);
+            present += range.count;
+            lowest = range.lowest.min(lowest);
+            highest = range.highest.max(highest);
             values.extend_from_slice(&row);
         }
         Self { columns, rows, values, present, lowest, highest }
@@ -323,14 +326,18 @@ pub fn rms_at_distance(
     };
     let (mut row, mut background, mut rms) = (Vec::new(), Vec::new(), Vec::new());
     let mut found = Vec::new();
+    let columns = in_range(centre.0 - outer_px, centre.0 + outer_px, grid.columns());
     for y in in_range(centre.1 - outer_px, centre.1 + outer_px, grid.rows()) {
         grid.row_into(y, &mut row);
-        noise.row_into(y, &mut background, &mut rms);
+        noise.part_into(y, columns.clone(), &mut background, &mut rms);
         let dy = y as f64 - centre.1;
-        for x in in_range(centre.0 - outer_px, centre.0 + outer_px, grid.columns()) {
+        for x in columns.clone() {
             let d = (x as f64 - centre.0).hypot(dy);
             let wanted = d >= inner_px && d <= outer_px && !mask.get(x, y);
-            let residual = row.get(x).zip(background.get(x)).map(|(value, level)| value - level);
+            let residual = row
+                .get(x)
+                .zip(background.get(x - columns.start))
+                .map(|(value, level)| value - level);
             found.extend(residual.filter(|r| wanted && !r.is_nan()));
         }
     }

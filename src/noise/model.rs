@@ -1,5 +1,7 @@
 //! The smooth model of background and rms over a map.
 
+use std::ops::Range;
+
 use crate::grid::PixelMask;
 
 /// Background and rms as smooth functions of position: values on a grid of nodes (the
@@ -25,6 +27,10 @@ pub struct Noise {
     /// The pixels left out as emission (or holes as deep), grown by about one beam.
     pub source_mask: PixelMask,
 }
+
+/// Pixels of a row that are worked out together.
+const LANES: usize = 8;
+const STEPS: [f64; LANES] = [0.0, 1.0, 2.0, 3.0, 4.0, 5.0, 6.0, 7.0];
 
 impl Noise {
     /// The same background and rms everywhere. A background that is not finite becomes 0,
@@ -59,8 +65,24 @@ impl Noise {
 
     /// Replaces the contents by one row of background and rms (`columns` values each).
     pub fn row_into(&self, y: usize, background: &mut Vec<f64>, rms: &mut Vec<f64>) {
-        self.line_into(&self.background_nodes, y, background);
-        self.line_into(&self.rms_nodes, y, rms);
+        self.part_into(y, 0..self.columns, background, rms);
+    }
+
+    /// The same for some columns of the row; those outside the map are left out.
+    pub(crate) fn part_into(
+        &self,
+        y: usize,
+        columns: Range<usize>,
+        background: &mut Vec<f64>,
+        rms: &mut Vec<f64>,
+    ) {
+        self.line_into(&self.background_nodes, y, columns.clone(), background);
+        self.rms_part_into(y, columns, rms);
+    }
+
+    /// The rms of some columns of the row; those outside the map are left out.
+    pub(crate) fn rms_part_into(&self, y: usize, columns: Range<usize>, rms: &mut Vec<f64>) {
+        self.line_into(&self.rms_nodes, y, columns, rms);
     }
 
     /// Largest over smallest rms of the model's nodes.
@@ -87,32 +109,44 @@ impl Noise {
         low + u * (high - low)
     }
 
-    fn line_into(&self, nodes: &[f64], y: usize, out: &mut Vec<f64>) {
-        out.clear();
+    fn line_into(&self, nodes: &[f64], y: usize, columns: Range<usize>, out: &mut Vec<f64>) {
+        let (left, right) = (columns.start, columns.end.min(self.columns));
+        let length = right.saturating_sub(left);
         let width = self.nodes_x.len();
         let (j, u) = bracket(&self.nodes_y, y as f64);
         let j1 = (j + 1).min(self.nodes_y.len() - 1);
-        let at = |i: usize| {
-            let low = nodes.get(j * width + i).copied().unwrap_or(0.0);
-            let high = nodes.get(j1 * width + i).copied().unwrap_or(0.0);
-            low + u * (high - low)
-        };
-        if width == 1 {
-            out.resize(self.columns, at(0));
+        let row = |j: usize| nodes.get(j * width..(j + 1) * width).unwrap_or(&[]);
+        let mut values = row(j).iter().zip(row(j1)).map(|(low, high)| low + u * (high - low));
+        let first = values.next().unwrap_or(0.0);
+        // Even noise has one value along the row.
+        if values.clone().all(|value| value.to_bits() == first.to_bits()) {
+            out.clear();
+            out.resize(length, first);
             return;
         }
-        for i in 0..width - 1 {
-            let (x0, x1) = (self.nodes_x[i], self.nodes_x[i + 1]);
-            let (a, b) = (at(i), at(i + 1));
-            let end = if i + 2 == width {
-                self.columns
-            } else {
-                ((x1.floor().max(0.0) as usize) + 1).min(self.columns)
-            };
+        // Whole blocks are written: what runs beyond an interval is written again by the next
+        // one, what runs beyond the last column is cut off.
+        out.resize(length + LANES, first);
+        let (mut start, mut a) = (left, first);
+        for (interval, b) in self.nodes_x.windows(2).zip(values) {
+            let &[x0, x1] = interval else { continue };
+            let end = ((x1.max(0.0) as usize) + 1).min(right);
+            if end <= start {
+                a = b;
+                continue;
+            }
             let slope = (b - a) / (x1 - x0);
-            // Through i32: that conversion is done for several pixels at once.
-            out.extend((out.len()..end).map(|x| a + slope * (f64::from(x as i32) - x0)));
+            let blocks = out.get_mut(start - left..).unwrap_or(&mut []).as_chunks_mut::<LANES>().0;
+            for block in blocks.iter_mut().take((end - start).div_ceil(LANES)) {
+                let at = start as f64;
+                for (value, step) in block.iter_mut().zip(STEPS) {
+                    *value = a + slope * ((at + step) - x0);
+                }
+                start += LANES;
+            }
+            (start, a) = (end, b);
         }
+        out.truncate(length);
     }
 }
 
@@ -157,6 +191,13 @@ mod tests {
                 assert!((background[x] - plane(fx, fy)).abs() < 1e-12);
                 assert!((noise.background(fx, fy) - background[x]).abs() < 1e-12);
                 assert!((noise.rms(fx, fy) - rms[x]).abs() < 1e-12);
+            }
+            let (mut part, mut rms_part) = (Vec::new(), Vec::new());
+            for columns in [0..1, 3..19, 7..23, 20..40, 30..40] {
+                noise.part_into(y, columns.clone(), &mut part, &mut rms_part);
+                let end = columns.end.min(23);
+                assert_eq!(part, background[columns.start.min(end)..end], "{columns:?}");
+                assert_eq!(rms_part, rms[columns.start.min(end)..end], "{columns:?}");
             }
         }
         assert!((noise.background(-9.0, 3.0) - plane(-0.5, 3.0)).abs() < 1e-12);

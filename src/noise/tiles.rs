@@ -2,9 +2,10 @@
 
 use super::smooth::{Axis, TileValue, fit_plane, node_values, points};
 use super::{Field, Noise, NoiseError, NoiseHints, NoiseSettings};
-use super::{grow_px, quantisation_floor, source_mask};
+use super::{grow_px, grown_mask, quantisation_floor, source_mask};
 use crate::grid::PixelMask;
-use crate::stats::{SortedSample, clipped, median, quantile};
+use crate::regions::groups_of_signal;
+use crate::stats::{SortedSample, clipped, dot, median, quantile};
 
 /// Tiles larger than this are sampled at every second pixel of both axes in the first look.
 const FULL_SAMPLE_PX: usize = 900;
@@ -50,8 +51,8 @@ pub(super) fn estimate(
     let mut signal = Vec::with_capacity(field.values.len());
     for _ in 0..2 {
         let fwhm = reach.map(|r: Reach| r.fwhm_px);
-        let mask = source_mask(field, &noise, settings, grow_px(hints, fwhm));
-        normalised_into(field, &noise, &mask, &mut signal);
+        normalised_into(field, &noise, &mut signal);
+        mask_sources(&mut signal, field, settings, grow_px(hints, fwhm));
         let measured = measure_reach(&signal, field.columns);
         reach = Some(measured);
         let mut found = masked_look(&signal, &noise, settings, x, y, step);
@@ -68,7 +69,8 @@ pub(super) fn estimate(
     Ok(noise)
 }
 
-fn axis(size: usize, settings: &NoiseSettings, hints: &NoiseHints) -> Axis {
+/// The windows of one axis: at least ten beams wide.
+pub(super) fn axis(size: usize, settings: &NoiseSettings, hints: &NoiseHints) -> Axis {
     let wide = match hints.beam_px {
         Some((major, _)) if major.is_finite() && major > 0.0 => settings.tile_beams * major,
         _ => settings.unknown_beam_tile_px as f64,
@@ -93,11 +95,11 @@ fn first_look(
             let thin = columns.len() * rows.len() > FULL_SAMPLE_PX;
             // Every second pixel counted from the nearer edge: the same for mirrored maps.
             let keep = |at: usize, size: usize| !thin || at.min(size - 1 - at).is_multiple_of(2);
+            let kept: Vec<usize> = columns.filter(|c| keep(*c, field.columns)).collect();
             buffer.clear();
             for row in rows.filter(|row| keep(*row, field.rows)) {
-                let line = field.row(row).get(columns.clone()).unwrap_or(&[]);
-                let kept = columns.clone().zip(line).filter(|(c, _)| keep(*c, field.columns));
-                buffer.extend(kept.map(|(_, v)| *v));
+                let line = field.row(row);
+                buffer.extend(kept.iter().map(|c| line.get(*c).copied().unwrap_or(f64::NAN)));
             }
             let mut sample = SortedSample::default();
             sample.refill(&mut buffer);
@@ -180,16 +182,33 @@ fn robust_levels(quiet: &[TileValue], x: Axis, y: Axis, scale: f64) -> Vec<f64> 
         .collect()
 }
 
-/// (value − background)/rms, NaN where blank or masked.
-fn normalised_into(field: &Field, noise: &Noise, mask: &PixelMask, out: &mut Vec<f64>) {
+/// (value − background)/rms, NaN where blank.
+fn normalised_into(field: &Field, noise: &Noise, out: &mut Vec<f64>) {
     out.clear();
     let (mut background, mut rms) = (Vec::new(), Vec::new());
     for y in 0..field.rows {
         noise.row_into(y, &mut background, &mut rms);
-        let row = field.row(y).iter().zip(mask.row(y));
-        out.extend(row.zip(background.iter().zip(&rms)).map(|((value, masked), (level, rms))| {
-            if *masked { f64::NAN } else { (value - level) / rms }
-        }));
+        let row = field.row(y).iter().zip(background.iter().zip(&rms));
+        out.extend(row.map(|(value, (level, rms))| (value - level) / rms));
+    }
+}
+
+/// Makes NaN of what [`source_mask`] masks, found in the normalised values themselves.
+fn mask_sources(signal: &mut [f64], field: &Field, settings: &NoiseSettings, grow_px: f64) {
+    let (outline, detection) = (settings.outline_sigma, settings.detection_sigma);
+    let columns = field.columns;
+    let groups = groups_of_signal(signal, columns, outline.min(detection), detection);
+    if groups.is_empty() {
+        return;
+    }
+    let mask = grown_mask(&groups, columns, field.rows, grow_px);
+    for (y, line) in signal.chunks_exact_mut(columns.max(1)).enumerate() {
+        let row = mask.row(y);
+        if row.contains(&true) {
+            for (value, _) in line.iter_mut().zip(row).filter(|(_, masked)| **masked) {
+                *value = f64::NAN;
+            }
+        }
     }
 }
 
@@ -212,7 +231,12 @@ fn masked_look(
             for row in rows {
                 let start = row * x.size;
                 let line = signal.get(start + columns.start..start + columns.end).unwrap_or(&[]);
-                buffer.extend(line.iter().filter(|v| !v.is_nan()));
+                // Counted first: most lines are whole and are copied at once.
+                if line.iter().map(|v| usize::from(v.is_nan())).sum::<usize>() == 0 {
+                    buffer.extend_from_slice(line);
+                } else {
+                    buffer.extend(line.iter().filter(|v| !v.is_nan()));
+                }
             }
             let enough = (settings.minimum_usable * area as f64).max(20.0);
             let measured = (buffer.len() as f64 >= enough)
@@ -262,11 +286,31 @@ fn measure_reach(signal: &[f64], columns: usize) -> Reach {
     let ratio = |(product, power): (f64, f64)| {
         if power > 0.0 { (product / power).clamp(0.0, 0.999) } else { 0.0 }
     };
-    let rho_y = ratio(pair_moments(signal, signal.get(columns..).unwrap_or(&[])));
-    let rho_x = ratio(signal.chunks_exact(columns.max(1)).fold((0.0, 0.0), |sums, row| {
-        let (product, power) = pair_moments(row, row.get(1..).unwrap_or(&[]));
-        (sums.0 + product, sums.1 + power)
-    }));
+    let (mut along, mut across) = ((0.0, 0.0), (0.0, 0.0));
+    let mut previous: Option<(&[f64], Option<f64>)> = None;
+    for row in signal.chunks_exact(columns.max(1)) {
+        let square = whole_square(row);
+        let shifted = row.get(1..).unwrap_or(&[]);
+        let ends = row.first().zip(row.last()).map(|(a, b)| 0.5 * (a * a + b * b));
+        add(
+            &mut along,
+            match square.zip(ends) {
+                Some((square, ends)) => (dot(row, shifted), square - ends),
+                None => pair_moments(row, shifted),
+            },
+        );
+        if let Some((above, above_square)) = previous {
+            add(
+                &mut across,
+                match above_square.zip(square) {
+                    Some((one, other)) => (dot(above, row), 0.5 * (one + other)),
+                    None => pair_moments(above, row),
+                },
+            );
+        }
+        previous = Some((row, square));
+    }
+    let (rho_x, rho_y) = (ratio(along), ratio(across));
     // ρ(d) = ρ(1)^(d²): sums over integer lags, squares with twice the exponent.
     let sum = |rho: f64, power: f64| {
         1.0 + 2.0
@@ -283,6 +327,18 @@ fn measure_reach(signal: &[f64], columns: usize) -> Reach {
         variance_px: sum(rho_x, 2.0) * sum(rho_y, 2.0),
         fwhm_px: (fwhm(rho_x) * fwhm(rho_y)).sqrt(),
     }
+}
+
+fn add(sums: &mut (f64, f64), (product, power): (f64, f64)) {
+    sums.0 += product;
+    sums.1 += power;
+}
+
+/// Sum of the squares of a row whose values all lie within ±4 (and are not NaN): its pairs
+/// need no looking at one by one.
+fn whole_square(row: &[f64]) -> Option<f64> {
+    let outside: usize = row.iter().map(|v| usize::from(v.is_nan() | (v.abs() > 4.0))).sum();
+    (outside == 0).then(|| dot(row, row))
 }
 
 /// Sums of a b and of (a² + b²)/2 over pairs that are both within ±4 (and not NaN).

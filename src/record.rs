@@ -144,8 +144,14 @@ pub struct Rival {
 pub struct CoreRecord {
     /// Where it is.
     pub position: OrMissing<Position>,
-    /// 1σ along each axis.
+    /// 1σ along an axis, the mean over all directions.
     pub position_error_arcsec: Bare,
+    /// 1σ towards east.
+    pub position_error_east_arcsec: Bare,
+    /// 1σ towards north.
+    pub position_error_north_arcsec: Bare,
+    /// Correlation of the errors towards east and north, −1 to 1.
+    pub position_error_correlation: Bare,
     /// What the choice rests on.
     pub basis: CoreBasis,
     /// 0 to 1.

@@ -82,6 +82,23 @@ impl Ridge {
         Self { points: self.points.iter().filter(clear).copied().collect(), ..self.clone() }
     }
 
+    /// The same ridge seen from a place a little way from the core it was traced from: its
+    /// points stay, their offsets change.
+    pub fn seen_from(mut self, shift: SkyOffset) -> Self {
+        for point in &mut self.points {
+            point.offset = point.offset.minus(shift);
+            point.distance = point.offset.radius();
+            point.bearing_deg = point.offset.position_angle_deg();
+        }
+        let mut farthest = 0.0;
+        self.points.retain(|point| {
+            let is_farther = point.distance > farthest;
+            farthest = point.distance.max(farthest);
+            is_farther
+        });
+        self
+    }
+
     /// Length along the ridge from the core to its last point.
     pub fn length(&self) -> f64 {
         let mut previous = SkyOffset::default();

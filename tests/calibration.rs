@@ -4,7 +4,7 @@
 //!
 //! `JETSPAN_MAPS=200 cargo test --release calibration -- --nocapture` prints the whole table, for
 //! the scenarios of `JETSPAN_SCENARIOS` (names with commas) and with the seed `JETSPAN_SEED` where
-//! these are set. Without them a few maps of each scenario show that truth and record speak of
+//! these are set. `JETSPAN_NO_HOST=1` withholds the host everywhere. Without them a few maps of each scenario show that truth and record speak of
 //! the same things.
 
 use std::collections::BTreeMap;
@@ -31,7 +31,11 @@ pub fn measured(map: &MadeMap, settings: &Settings) -> Result<MapRecord, &'stati
         shape: vec![rows as u64, columns as u64],
         sha256: String::new(),
     };
-    let text = Value::Object(map.description.clone()).to_string();
+    let mut description = map.description.clone();
+    if from_environment::<u8>("JETSPAN_NO_HOST") == Some(1) {
+        description.retain(|key, _| !key.starts_with("host_"));
+    }
+    let text = Value::Object(description).to_string();
     let layer = Layer::from_json_text(&text, Origin::Sidecar, "made").expect("a description");
     let description = resolve(vec![layer]).expect("consistent description");
     let map = SkyMap::from_stored(stored, description).expect("a map");
@@ -188,6 +192,24 @@ impl Tally {
     }
 }
 
+/// Of cores chosen without a host, by confidence: how many, their mean confidence, and the
+/// share of right ones.
+fn confidence_rows(confidences: &[(f64, bool)]) -> String {
+    let mut text = String::new();
+    for (low, high) in [(0.0, 0.2), (0.2, 0.4), (0.4, 0.6), (0.6, 0.8), (0.8, 0.9), (0.9, 1.01)] {
+        let of: Vec<_> = confidences.iter().filter(|c| low <= c.0 && c.0 < high).collect();
+        if !of.is_empty() {
+            let n = of.len() as f64;
+            let mean = of.iter().map(|c| c.0).sum::<f64>() / n;
+            let right = of.iter().filter(|c| c.1).count() as f64 / n;
+            text += &format!(
+                "core without host: {n:4} of mean confidence {mean:4.2}, right {right:4.2}\n"
+            );
+        }
+    }
+    text
+}
+
 const HEAD: &str = "quantity                                               N  val  lim  median  width  c68  c95  limits true\n";
 
 /// The tallies of one scenario.
@@ -204,6 +226,8 @@ pub struct Score {
     pub decided: usize,
     /// A source where there is none.
     pub detections: usize,
+    /// Confidence of each core chosen without a host, and whether it is the right one.
+    pub confidences: Vec<(f64, bool)>,
 }
 
 impl Score {
@@ -241,15 +265,25 @@ impl Score {
         let position = at("core.position");
         if let (Some(x), Some(y)) = (position["x_px"].as_f64(), position["y_px"].as_f64()) {
             let origin = truth.observation.frame.origin;
+            if at("core.basis") != "host" {
+                let confidence = at("core.confidence").as_f64().expect("a number");
+                self.confidences.push((confidence, (x - origin.x).hypot(y - origin.y) <= beam));
+            }
             if (x - origin.x).hypot(y - origin.y) > beam {
                 self.wrong_core += 1;
                 return;
             }
-            let scale = truth.observation.frame.mean_scale();
-            let sigma = at("core.position_error_arcsec").as_f64().unwrap_or(f64::NAN);
-            for (off, axis) in [(x - origin.x, "x"), (y - origin.y, "y")] {
-                let value =
-                    serde_json::json!({"value": off * scale, "minus": sigma, "plus": sigma});
+            let error =
+                |key: &str| at(&format!("core.position_error_{key}")).as_f64().unwrap_or(f64::NAN);
+            let (east, north) = (error("east_arcsec"), error("north_arcsec"));
+            let cross = error("correlation") * east * north;
+            let to_pixel = truth.observation.frame.to_pixel;
+            for (off, axis, [a, b]) in
+                [(x - origin.x, "x", to_pixel[0]), (y - origin.y, "y", to_pixel[1])]
+            {
+                let square = (a * east).powi(2) + (b * north).powi(2) + 2.0 * a * b * cross;
+                let sigma = square.max(0.0).sqrt();
+                let value = serde_json::json!({"value": off, "minus": sigma, "plus": sigma});
                 let path = format!("core.position ({axis})");
                 self.tallies.entry(path).or_default().add(&value, 0.0, Scale::Plain);
             }
@@ -324,6 +358,7 @@ impl Score {
             self.decided,
             self.swapped
         );
+        text.push_str(&confidence_rows(&self.confidences));
         if !self.tallies.is_empty() {
             text.push_str(HEAD);
         }

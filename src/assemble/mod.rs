@@ -112,6 +112,9 @@ pub fn assemble_without_source(
         core: CoreRecord {
             position: OrMissing::missing(because),
             position_error_arcsec: Bare::missing(because),
+            position_error_east_arcsec: Bare::missing(because),
+            position_error_north_arcsec: Bare::missing(because),
+            position_error_correlation: Bare::missing(because),
             basis: CoreBasis::None,
             confidence: 0.0,
             rivals: Vec::new(),
@@ -214,6 +217,8 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         side.length_kpc = kpc;
     }
 
+    let place = model.core.position_error;
+    let placed = |error: Bare| core_px.map_or(Bare::missing(Because::NoCore), |_| error);
     let peak = model.peak;
     let rms = if peak.signal_to_noise > 0.0 { peak.value / peak.signal_to_noise } else { 0.0 };
     let near = findings.strips.as_ref().and_then(|s| s.near_rms);
@@ -286,9 +291,15 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         ),
         core: CoreRecord {
             position: OrMissing::from_option(core_px.map(|p| position(map, p)), Because::NoCore),
-            position_error_arcsec: core_px.map_or(Bare::missing(Because::NoCore), |_| {
-                units.bare_arcsec(model.core.position_sigma)
-            }),
+            position_error_arcsec: placed(units.bare_arcsec(model.core.position_sigma)),
+            position_error_east_arcsec: placed(units.bare_arcsec(place.east_east.max(0.0).sqrt())),
+            position_error_north_arcsec: placed(
+                units.bare_arcsec(place.north_north.max(0.0).sqrt()),
+            ),
+            position_error_correlation: placed(Bare::number(
+                place.correlation(),
+                Because::OutOfDomain,
+            )),
             basis: model.core.basis,
             confidence: model.core.confidence,
             rivals: model

@@ -105,7 +105,7 @@ pub(super) fn core_axes_mas(
         (Some(c), _) => [c.deconvolved.major_arcsec, c.deconvolved.minor_arcsec],
         (None, Some(fit)) => {
             let beam = &findings.observed.working_beam;
-            let signal = fit.peak / fit.peak_sigma.max(f64::MIN_POSITIVE);
+            let signal = fit.peak / fit.peak_noise.max(f64::MIN_POSITIVE);
             [beam.major, beam.minor].map(|fwhm| {
                 let limit = resolution_limit(fwhm, signal);
                 let limit = Measurement::upper_limit(limit, findings.settings.confidence);

@@ -3,6 +3,9 @@
 
 pub mod associate;
 pub mod core;
+pub mod core_fit;
+#[cfg(test)]
+mod core_tests;
 pub mod sides;
 
 use image::{GrayImage, Luma};
@@ -14,15 +17,15 @@ use crate::grid::Grid;
 use crate::map::beam::Beam;
 use crate::map::geometry::{LocalFrame, SkyGeometry};
 use crate::noise::{Noise, NoiseCorrelation};
+use crate::record::CoreBasis;
 use crate::regions::{self, Region, local_maxima, region_mask};
 use crate::ridge::{Ridge, RidgeContext, trace_ridges};
 use crate::units::Pixel;
 use crate::window::Window;
 
 use self::associate::SourceRegions;
-use self::core::{
-    CORE_DETECTION_SIGMA, Core, KnownCore, Peak, PointFit, choose_core, fit_point_on_jets,
-};
+use self::core::{Core, HOST_SIGMA_BEAMS, KnownCore, Peak, choose_core, is_detected};
+use self::core_fit::{FitContext, Placing, PointFit, fit_core};
 use self::sides::{SideFeatures, find_features, side_of};
 
 /// What the source stages need to know of the map.
@@ -137,37 +140,50 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
     let pixels: Vec<Peak> = members.iter().map(|r| as_peak(r.peak, background)).collect();
     let brightest_pixel = highest(&pixels)?;
 
-    let mut core = choose_core(
-        &window,
-        &peaks,
-        input.known,
-        ends,
-        input.beam,
-        &rough,
-        (input.noise, input.correlation),
-        input.z_confidence,
-    );
-    let frame = input.geometry.local_frame(core.pixel.unwrap_or(middle));
-    let mut coreless = without_core(&window, &core, input.beam, &frame);
-    let sides = core.pixel.map(|_| {
-        let context = RidgeContext {
-            frame: &frame,
-            beam: input.beam,
-            outline_sigma: input.outline_sigma,
-            hint_deg: input.jet_side_pa_deg,
-            z_confidence: input.z_confidence,
+    let fitting = FitContext {
+        window: &window,
+        beam: input.beam,
+        frame: &rough,
+        noise: (input.noise, input.correlation),
+    };
+    let mut core = choose_core(&fitting, &peaks, input.known, ends, input.z_confidence);
+    let trace = |core: &Core| {
+        let frame = input.geometry.local_frame(core.pixel.unwrap_or(middle));
+        let coreless = without_core(&window, core, input.beam, &frame);
+        let ridges = core.pixel.map(|_| {
+            let context = RidgeContext {
+                frame: &frame,
+                beam: input.beam,
+                outline_sigma: input.outline_sigma,
+                hint_deg: input.jet_side_pa_deg,
+                z_confidence: input.z_confidence,
+            };
+            trace_ridges(&coreless, &context)
+        });
+        (frame, coreless, ridges)
+    };
+    let (mut frame, mut coreless, mut ridges) = trace(&core);
+    for _ in 0..MOST_RETRACES {
+        let Some((at, fit)) = core.pixel.zip(refit_core(&fitting, &core, ridges.as_ref())) else {
+            break;
         };
-        let ridges = trace_ridges(&coreless, &context);
-        let features =
-            find_features(&peaks, &points, &ridges, &frame, input.beam, level, core.fit.is_some());
+        core = core.fitted(fit);
+        let shift = frame.difference(at, fit.pixel);
+        if shift.radius() > RETRACE_BEAMS * input.beam.minor {
+            (frame, coreless, ridges) = trace(&core);
+        } else {
+            // The ridges stay where they are and are seen from the new place.
+            frame = input.geometry.local_frame(fit.pixel);
+            coreless = without_core(&window, &core, input.beam, &frame);
+            ridges = ridges.map(|pair| pair.map(|ridge| ridge.seen_from(shift)));
+            break;
+        }
+    }
+    let sides = ridges.map(|ridges| {
+        let detected = core.fit.is_some();
+        let features = find_features(&peaks, &points, &ridges, &frame, input.beam, level, detected);
         (ridges, features)
     });
-    if let Some((ridges, features)) = &sides
-        && let Some(fit) = refit_core(input, &window, &core, &frame, ridges, features)
-    {
-        core.fit = Some(fit);
-        coreless = without_core(&window, &core, input.beam, &frame);
-    }
     let side_cut = sides.as_ref().map_or([!open_ends.is_empty(); 2], |(ridges, features)| {
         cut_sides(&open_ends, ridges, features, &frame)
     });
@@ -222,36 +238,29 @@ fn cut_sides(
     cut
 }
 
-/// Hot spots nearer than this many beam majors leave no room to tell jets from core.
-const REFIT_BEAMS: f64 = 2.5;
+/// A core that moves farther than this many beam minors has its ridges traced again.
+const RETRACE_BEAMS: f64 = 0.1;
+/// Ridges are traced again this often at the most.
+const MOST_RETRACES: usize = 2;
 
-/// The core's component again, now on jets that start at it in the directions of the traced
-/// ridges. `None` where the core is not detected, no jet is traced, or a hot spot is too near.
-fn refit_core(
-    input: &SourceInput,
-    window: &Window,
-    core: &Core,
-    frame: &LocalFrame,
-    ridges: &[Ridge; 2],
-    features: &[SideFeatures; 2],
-) -> Option<PointFit> {
-    let first = core.fit?;
-    let reach = REFIT_BEAMS * input.beam.major;
-    let near = |side: &SideFeatures| side.hotspot.is_some_and(|h| h.distance() < reach);
-    if features.iter().any(near) {
-        return None;
-    }
-    let bearings: Vec<f64> = ridges
+/// The core again, together with the jets that start at it. `None` where nothing is detected.
+///
+/// The observer's own choice stays where it is. A core that was not found at its host is
+/// looked for once more within the host's error: its jets may have hidden it.
+fn refit_core(fitting: &FitContext, core: &Core, ridges: Option<&[Ridge; 2]>) -> Option<PointFit> {
+    let beam = fitting.beam;
+    let jets: Vec<&Ridge> = ridges
         .iter()
-        .filter(|ridge| ridge.points.last().is_some_and(|p| p.distance >= reach))
-        .map(|ridge| ridge.bearing_at(input.beam.major))
+        .flat_map(|pair| pair.iter())
+        .filter(|ridge| ridge.points.last().is_some_and(|p| p.distance > beam.major))
         .collect();
-    if bearings.is_empty() {
-        return None;
-    }
-    let noise = (input.noise, input.correlation);
-    let fit = fit_point_on_jets(window, first.pixel, &bearings, input.beam, frame, noise)?;
-    (fit.peak > CORE_DETECTION_SIGMA * fit.peak_sigma).then_some(fit)
+    let start = core.pixel?;
+    let placing = match (core.basis, core.fit) {
+        (CoreBasis::Given, _) => Placing::fixed(beam),
+        (_, None) => Placing::Near(HOST_SIGMA_BEAMS * beam.major),
+        (_, Some(_)) => Placing::Free,
+    };
+    fit_core(fitting, start, placing, &jets, start).filter(is_detected)
 }
 
 /// The source's pixels at or above the level, without islands smaller than `least_px`: where

@@ -35,7 +35,9 @@ pub(super) fn component_separation(findings: &Findings) -> Measurement {
         0.34 * (along - 2.0 * beam * beam).max(0.0).sqrt()
     };
     let plus = minus.hypot(hidden(one).hypot(hidden(other)));
-    Measurement::value(separation, minus, plus)
+    let found = Measurement::value(separation, minus, plus);
+    // Of a source that leaves the map an end may lie outside.
+    if findings.model.cut_off { found.as_lower_limit(findings.settings.confidence) } else { found }
 }
 
 /// The fitted components, brightest flux first.

@@ -143,6 +143,37 @@ fn a_blended_pair_is_told_apart() {
 }
 
 #[test]
+fn a_hot_spot_on_a_lobe_is_a_component_of_its_own() {
+    // A lobe of three beams with a point at 60 rms in its outer half, no local maximum apart;
+    // far away a chain of knots that Gaussians take many steps to describe must not hide it.
+    let beam = Beam::round(6.0).expect("a beam");
+    for seed in 0..6 {
+        let mut components = vec![
+            gaussian(30.0, 30.0, 3.0, [18.0, 14.0, 0.0]),
+            gaussian(22.5, 30.0, 1.8, [0.0; 3]),
+            gaussian(60.0, 30.0, 2.0, [50.0, 2.0, 0.0]),
+        ];
+        components.extend((0..7).map(|k| {
+            let k = f64::from(k);
+            gaussian(72.0 + 5.0 * k, 30.0 + 3.0 * (1.3 * k).sin(), 2.0 + (k - 3.0).abs(), [3.0; 3])
+        }));
+        let scene = Scene {
+            components,
+            noise: Some((NoiseKind::Smoothed(GaussianShape::circular(6.0)), 0.03, seed)),
+            ..Scene::empty(121, 61, GaussianShape::circular(6.0))
+        };
+        let window = above(scene.render(), 0.03, 0.09);
+        let report = fitted(&window, &beam, 1.0, 0.03, 6.0);
+        let own = report.components.iter().find(|c| {
+            // Window cells begin at (7, 11).
+            (c.pixel.x - 29.5).hypot(c.pixel.y - 41.0) < 1.0 && c.minor.0 < 8.0
+        });
+        // Noise moves a point of S/N 60 by 0.06 px, the slope of the lobe by a few times that.
+        assert!(own.is_some(), "seed {seed}: {:?}", report.components);
+    }
+}
+
+#[test]
 fn one_gaussian_stays_one() {
     // Elongated and bright, yet a single Gaussian: not to be split.
     let beam = Beam::round(6.0).expect("a beam");

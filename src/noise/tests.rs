@@ -207,6 +207,33 @@ fn stripes_count_as_noise() {
 }
 
 #[test]
+fn low_values_replaced_by_zero_in_coarse_steps_do_not_hide_the_noise() {
+    // Steps of one rms, all below −1.5 rms set to 0: two levels of a half Gaussian, whose own
+    // rms is 0.83. The rms rises from 1 to 2.5 along x, as tiles have to show.
+    for seed in 0..4 {
+        let smooth = scene(300, Vec::new(), seed);
+        let stored = |rms: &dyn Fn(usize) -> f64| {
+            Array2::from_shape_fn((300, 300), |(y, x)| {
+                let level = (rms(x) * smooth[[y, x]]).round();
+                if level < -1.0 { 0.0 } else { level }
+            })
+        };
+        let hints = NoiseHints { quantisation_step: 1.0, ..beam_hints() };
+        let even = estimate(&stored(&|_| 1.0), &hints);
+        assert_eq!(even.method, "censored");
+        assert!((even.rms(150.0, 150.0) - 1.0).abs() < 0.06, "{}", even.rms(150.0, 150.0));
+        let rising = |x: usize| 1.0 + 1.5 * x as f64 / 299.0;
+        let noise = estimate(&stored(&rising), &hints);
+        // A tile's own share of high values tells its rms to about 10 %; the first third and
+        // the last of the map differ by 1.9.
+        let ratio = noise.rms(270.0, 150.0) / noise.rms(30.0, 150.0);
+        assert!((1.4..2.5).contains(&ratio), "{ratio}");
+        // Without the replacement the same steps are ordinary noise.
+        assert_eq!(estimate(&smooth.mapv(|v| v.round()), &hints).method, "local");
+    }
+}
+
+#[test]
 fn maps_cut_off_at_a_floor_are_read_from_what_is_left() {
     for (floor, level) in [(0.0, 0.0), (0.0, 0.5), (0.0, -0.4), (-1.0, 0.0)] {
         let (mut rms, mut background) = (0.0, 0.0);

@@ -411,7 +411,10 @@ impl Truth {
             values.number("source.bend_deg", misalignment.abs());
             if has_hotspots {
                 values.number("source.hotspot_separation_arcsec", chord.radius());
-                values.number("source.component_separation_arcsec", chord.radius());
+                // An older pair of lobes lies farther out, and its components have no one place.
+                if p.outer.flux_density_mjy <= 0.0 {
+                    values.number("source.component_separation_arcsec", chord.radius());
+                }
             }
         }
         let symmetry = match p.bend.shape {

@@ -248,7 +248,7 @@ const SEARCH_EVALUATIONS: usize = 20;
 /// every brighter one.
 const PROMINENCE_SIGMA: f64 = 3.0;
 /// Most residuals of one fit that are tried as a further component.
-const MOST_RESIDUALS: usize = 3;
+const MOST_RESIDUALS: usize = 6;
 /// Peak below which a fitted component is dropped, in rms.
 const LEAST_PEAK_SIGMA: f64 = 2.0;
 /// Two components of like size closer than this, in beams, are one.
@@ -332,28 +332,28 @@ impl Search<'_> {
                 truncated = significant.is_some();
                 break;
             }
-            let mut trials: Vec<(Vec<Gaussian>, Vec<Gaussian>, Vec<[f64; 2]>)> = Vec::new();
+            let mut trials = Vec::new();
             if let Some(found) = significant.filter(|_| tried.len() < MOST_RESIDUALS) {
                 tried.push(found.at);
                 let new = Gaussian::beam_shaped(found.amplitude, found.at, 1.1);
-                trials.push((best.gaussians.clone(), vec![new], vec![found.at]));
+                trials.push((best.gaussians.clone(), vec![new], Some(found.at)));
             }
             if let Some(k) = self.longest(&best, &whole) {
                 whole.extend(best.gaussians.get(k).copied());
                 let mut others = best.gaussians.clone();
                 let two = split(&others.remove(k));
-                trials.push((others, two, Vec::new()));
+                trials.push((others, two, None));
             }
             if trials.is_empty() {
                 break;
             }
-            for (others, new, places) in trials {
+            for (others, new, place) in trials {
                 // Only what lies near the new ones moves with them.
                 let (mut free, held): (Vec<Gaussian>, Vec<Gaussian>) =
                     others.into_iter().partition(|g| new.iter().any(|n| g.is_near(n)));
                 free.extend(new);
                 if let Some(fit) = self.fit_beside(&held, free)
-                    && self.gain(&best, &fit, &places) > self.settings.least_gain
+                    && self.gain(&best, &fit, place) > self.settings.least_gain
                 {
                     best = fit;
                     tried.clear();
@@ -407,10 +407,10 @@ impl Search<'_> {
     /// stands at a place of its own is judged by the reduced χ² near it: what is not yet
     /// described elsewhere says nothing of it. Two halves of one are judged by that of the
     /// whole source (no place).
-    fn gain(&self, first: &Fit, second: &Fit, places: &[[f64; 2]]) -> f64 {
+    fn gain(&self, first: &Fit, second: &Fit, place: Option<[f64; 2]>) -> f64 {
         let model_error = self.settings.model_error;
         let chi = |fit: &Fit| self.pixels.chi_squared(&fit.residual, model_error);
-        let reduced = self.pixels.reduced_near(&second.residual, model_error, places);
+        let reduced = self.pixels.reduced_near(&second.residual, model_error, place);
         let independent = self.pixels.independent();
         let more = second.gaussians.len() as f64 - first.gaussians.len() as f64;
         (chi(first) - chi(second)) / reduced.max(1.0) - 6.0 * more * independent.ln().max(1.0)

@@ -29,10 +29,11 @@ pub(super) fn component_separation(findings: &Findings) -> Measurement {
     // An end much wider than the beam may hide the feature that ends the source: as likely
     // anywhere in its outer half, within 0.34 of its width with 68 %.
     let axis_deg = frame.offset(one.pixel).minus(frame.offset(other.pixel)).position_angle_deg();
+    let width = findings.observed.working_beam.projected_fwhm(axis_deg + 90.0);
     let hidden = |c: &Component| {
         let (sin, cos) = (axis_deg - c.pa_deg).to_radians().sin_cos();
         let along = (c.major.0 * cos).powi(2) + (c.minor.0 * sin).powi(2);
-        0.34 * (along - 2.0 * beam * beam).max(0.0).sqrt()
+        0.34 * (along - 2.0 * width * width).max(0.0).sqrt()
     };
     let plus = minus.hypot(hidden(one).hypot(hidden(other)));
     let found = Measurement::value(separation, minus, plus);

@@ -242,18 +242,15 @@ impl Pixels {
         sum / self.per_sample
     }
 
-    /// χ² over the number of samples of the pixels within [`NEAR_BEAMS`] of the places; of all
-    /// pixels where there is no place.
+    /// χ² over the number of samples of the pixels within [`NEAR_BEAMS`] of a place, or of all.
     pub(super) fn reduced_near(
         &self,
         residual: &[f64],
         model_error: f64,
-        places: &[[f64; 2]],
+        place: Option<[f64; 2]>,
     ) -> f64 {
-        let near = |at: &[f64; 2]| {
-            let close = |p: &[f64; 2]| (p[0] - at[0]).hypot(p[1] - at[1]) <= NEAR_BEAMS;
-            places.is_empty() || places.iter().any(close)
-        };
+        let near =
+            |at: &[f64; 2]| place.is_none_or(|p| (p[0] - at[0]).hypot(p[1] - at[1]) <= NEAR_BEAMS);
         let (mut sum, mut count) = (0.0, 0.0);
         for (k, _) in self.position.iter().enumerate().filter(|(_, at)| near(at)) {
             let (r, value, sigma) = (residual[k], self.value[k], self.sigma[k]);

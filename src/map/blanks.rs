@@ -69,7 +69,7 @@ impl Extremes {
         let second_highest =
             high.iter().chain(rest).fold(f64::NEG_INFINITY, |high, v| below(*v, high));
         let count = |level: f64| -> usize {
-            stored.iter().map(|v| usize::from(*v >= level && *v <= level)).sum()
+            stored.iter().map(|v| usize::from((*v - level).abs() <= 0.0)).sum()
         };
         (second_lowest.is_finite() && second_highest.is_finite()).then(|| Self {
             lowest,
@@ -238,7 +238,7 @@ fn blocks(stored: &[f64], columns: usize) -> Vec<Block> {
         let (Some(one), Some(right), Some(down)) = (one, right, down) else { return false };
         let mut equal = 0u32;
         for k in 0..STRETCH {
-            let same = |other: f64| one[k] >= other && one[k] <= other;
+            let same = |other: f64| (one[k] - other).abs() <= 0.0;
             equal |= u32::from(same(right[k]) | same(down[k]));
         }
         equal == 0

@@ -224,7 +224,7 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
     let near = findings.strips.as_ref().and_then(|s| s.near_rms);
     let status = if unresolved { Status::Unresolved } else { Status::Measured };
     // In the map's own unit: a ratio needs no flux scale, and its error cancels.
-    let total_sum = Measurement::symmetric(sums.total.value, sums.total.sigma);
+    let total_sum = whole(Measurement::symmetric(sums.total.value, sums.total.sigma));
     let prominence = if unresolved {
         Measurement::missing(Because::Unresolved)
     } else {

@@ -84,7 +84,8 @@ pub fn brightness_temperature_k(
 /// Assumes: the two errors are independent (first order, ∂/∂S_core = S_total/(S_total−S_core)²,
 /// ∂/∂S_total = −S_core/(S_total−S_core)²); a flux-scale error common to both cancels in
 /// truth, so leave it out of what is passed in.
-/// An upper limit on the core gives an upper limit. Where the extended emission is less than
+/// An upper limit on the core gives an upper limit, and so does a lower limit on the total, with
+/// the core's upper end (+ 1.645 σ) put in. Where the extended emission is less than
 /// three times its error, the result is a 95 % lower limit with the extended emission's
 /// upper end (max(S_total − S_core, 0) + 1.645 σ) put in.
 /// Source: usage of the trade, for instance Fan & Zhang 2003, A&A 407, 899.
@@ -121,8 +122,8 @@ pub fn core_prominence(core: Measurement, total: Measurement) -> Measurement {
         (LowerLimit { lower_limit, confidence }, Value { value, .. }) => {
             Measurement::lower_limit(ratio(lower_limit, value), confidence)
         }
-        (Value { value, .. }, LowerLimit { lower_limit, confidence }) => {
-            Measurement::upper_limit(ratio(value, lower_limit), confidence)
+        (Value { value, plus, .. }, LowerLimit { lower_limit, confidence }) => {
+            Measurement::upper_limit(ratio(value + 1.645 * plus, lower_limit), confidence)
         }
         (Value { value, .. }, UpperLimit { upper_limit, confidence }) => {
             Measurement::lower_limit(ratio(value, upper_limit), confidence)

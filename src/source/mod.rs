@@ -164,8 +164,18 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
     };
     let (mut frame, mut coreless, mut ridges) = trace(&core);
     for _ in 0..MOST_RETRACES {
-        let Some((at, fit)) = core.pixel.zip(refit_core(&fitting, &core, ridges.as_ref())) else {
-            break;
+        let Some(at) = core.pixel else { break };
+        let fit = match refit_core(&fitting, &core, ridges.as_ref()) {
+            Refit::Found(fit) => fit,
+            Refit::Unsettled => break,
+            Refit::Hidden => {
+                let had_fit = core.fit.is_some();
+                core = core.hidden(input.known.host, &fitting, input.z_confidence);
+                if had_fit {
+                    (frame, coreless, ridges) = trace(&core);
+                }
+                break;
+            }
         };
         core = core.fitted(fit);
         let shift = frame.difference(at, fit.pixel);
@@ -243,24 +253,39 @@ const RETRACE_BEAMS: f64 = 0.1;
 /// Ridges are traced again this often at the most.
 const MOST_RETRACES: usize = 2;
 
-/// The core again, together with the jets that start at it. `None` where nothing is detected.
+/// What a fit of the core together with its jets says.
+enum Refit {
+    /// The core stands out.
+    Found(PointFit),
+    /// Nothing stands out above the jets.
+    Hidden,
+    /// There is no such fit: what was known stays.
+    Unsettled,
+}
+
+/// The core again, together with the jets that start at it.
 ///
 /// The observer's own choice stays where it is. A core that was not found at its host is
-/// looked for once more within the host's error: its jets may have hidden it.
-fn refit_core(fitting: &FitContext, core: &Core, ridges: Option<&[Ridge; 2]>) -> Option<PointFit> {
+/// looked for once more within the host's error: its jets may have hidden it. A jet's own crest
+/// may have been taken for one.
+fn refit_core(fitting: &FitContext, core: &Core, ridges: Option<&[Ridge; 2]>) -> Refit {
     let beam = fitting.beam;
     let jets: Vec<&Ridge> = ridges
         .iter()
         .flat_map(|pair| pair.iter())
         .filter(|ridge| ridge.points.last().is_some_and(|p| p.distance > beam.major))
         .collect();
-    let start = core.pixel?;
+    let Some(start) = core.pixel else { return Refit::Unsettled };
     let placing = match (core.basis, core.fit) {
         (CoreBasis::Given, _) => Placing::fixed(beam),
         (_, None) => Placing::Near(HOST_SIGMA_BEAMS * beam.major),
         (_, Some(_)) => Placing::Free,
     };
-    fit_core(fitting, start, placing, &jets, start).filter(is_detected)
+    match fit_core(fitting, start, placing, &jets, start) {
+        Some(fit) if is_detected(&fit) => Refit::Found(fit),
+        None if jets.is_empty() => Refit::Unsettled,
+        _ => Refit::Hidden,
+    }
 }
 
 /// The source's pixels at or above the level, without islands smaller than `least_px`: where

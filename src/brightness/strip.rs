@@ -251,15 +251,15 @@ pub(super) fn eliminate<const N: usize>(
     mut right: [f64; N],
 ) -> Option<[f64; N]> {
     for k in 0..N {
-        let scale = matrix[k][k];
-        if !(scale > 0.0) {
+        let pivot = matrix[k];
+        if pivot[k].is_nan() || pivot[k] <= 0.0 {
             return None;
         }
         for row in k + 1..N {
-            let factor = matrix[row][k] / scale;
+            let factor = matrix[row][k] / pivot[k];
             let own = matrix[row][row];
-            for column in k..N {
-                matrix[row][column] -= factor * matrix[k][column];
+            for (value, above) in matrix[row].iter_mut().zip(&pivot).skip(k) {
+                *value -= factor * above;
             }
             if row == k + 1 && matrix[row][row] <= 1e-12 * own {
                 return None;

@@ -99,7 +99,7 @@ flag_kinds! {
     CORE_UNDETECTED = "core-undetected", Note, "source",
         "No compact component stands at the host's position: the host marks the core, its flux is an upper limit.";
     CORE_BLENDED = "core-blended", Note, "source",
-        "Emission within one beam of the core is as bright as the core itself ({share} of the peak): the core's flux depends on how it was separated.";
+        "Emission within one beam of the core ({share} of the brightness there) is as bright as half the core or could not be told from it to a tenth: the core's flux depends on how it was separated.";
     COMPONENTS_UNSETTLED = "components-unsettled", Note, "components",
         "The fit of {count} Gaussian components was stopped before it settled or before all emission was described: the source is too intricate; single components are rough.";
     EDGE = "source-leaves-map", Caution, "extent",

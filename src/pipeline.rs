@@ -19,6 +19,7 @@ use crate::regions::{Region, RegionSettings, find_regions, region_mask};
 use crate::settings::Settings;
 use crate::source::associate::{Anchor, CHANCE_UNSURE, SourceRegions, associate};
 use crate::source::core::KnownCore;
+use crate::source::core_fit::PointFit;
 use crate::source::sides::end_offset;
 use crate::source::{SourceInput, SourceModel, model_source};
 use crate::stats::normal_deviate;
@@ -425,8 +426,9 @@ fn flag_source(
         Some(_) if core.fit.is_none() => flags.push(Flag::new(flags::CORE_UNDETECTED, &[])),
         Some(_) => {}
     }
-    if let Some(fit) = core.fit.filter(|f| f.base > 0.5 * f.peak) {
-        flags.push(Flag::new(flags::CORE_BLENDED, &[("share", fit.base / (fit.base + fit.peak))]));
+    if let Some(fit) = core.fit.filter(PointFit::is_blended) {
+        let base = fit.base.max(0.0);
+        flags.push(Flag::new(flags::CORE_BLENDED, &[("share", base / (base + fit.peak))]));
     }
     if model.cut_off {
         flags.push(Flag::new(flags::EDGE, &[]));

@@ -64,6 +64,20 @@ pub struct PointFit {
     pub residual: f64,
 }
 
+/// What lies under a core is as bright as this share of it: blended.
+const BLENDED_BASE: f64 = 0.5;
+/// What is not known of the emission under a core makes this share of it unsure: blended.
+const BLENDED_UNSURE: f64 = 0.1;
+
+impl PointFit {
+    /// Whether what lies under the component weighs as much as itself, or could not be told from
+    /// it (a first knot within a beam, say) to a tenth, noise apart.
+    pub fn is_blended(&self) -> bool {
+        let unknown = (self.peak_sigma.powi(2) - self.peak_noise.powi(2)).max(0.0).sqrt();
+        self.base > BLENDED_BASE * self.peak || unknown > BLENDED_UNSURE * self.peak
+    }
+}
+
 /// What is known of the place before the fit.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Placing {

@@ -7,10 +7,12 @@
 //! transverse profile. "Bearing of the ridge at d" is the direction from the core to the
 //! ridge's point at radial distance d.
 
+use crate::constants::FWHM_PER_SIGMA;
+use crate::edge::{ProfilePoint, Wander, last_above};
 use crate::map::beam::Beam;
 use crate::map::geometry::LocalFrame;
 use crate::measurement::{Because, Measurement};
-use crate::stats::normal_probability;
+use crate::stats::{median, normal_deviate, normal_probability};
 use crate::units::{SkyOffset, wrap_difference_deg, wrap_directed_deg};
 use crate::window::Window;
 
@@ -31,9 +33,20 @@ pub struct RidgePoint {
     pub width: Measurement,
     /// The same with the beam's projected width taken off.
     pub width_deconvolved: Measurement,
+    /// The beam's projected width there.
+    pub beam_width: f64,
 }
 
 impl RidgePoint {
+    /// 1σ of its place across the ridge: 0.30 W²/b over the signal-to-noise, where the noise's
+    /// gradient cancels that of a Gaussian profile of FWHM W (the beam's b where W is not
+    /// known); no more than such a profile's own standard deviation.
+    pub fn aside_sigma(&self) -> f64 {
+        let width = self.width.best().unwrap_or(self.beam_width).max(self.beam_width);
+        let sigma = 0.30 * width * width / (self.beam_width * self.signal_to_noise().max(1.0));
+        sigma.min(width / FWHM_PER_SIGMA)
+    }
+
     /// Brightness over local rms.
     pub fn signal_to_noise(&self) -> f64 {
         self.brightness / self.rms.max(f64::MIN_POSITIVE)
@@ -49,6 +62,30 @@ pub struct Ridge {
     pub detected: bool,
     /// Points at growing distance, up to the last one above the outline threshold.
     pub points: Vec<RidgePoint>,
+    /// Where it ends.
+    pub end: Option<RidgeEnd>,
+}
+
+/// The end of a ridge: where it last stands at the outline threshold, freed from what noise
+/// has added to it.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct RidgeEnd {
+    /// Offset from the core.
+    pub offset: SkyOffset,
+    /// How noise moves it along the ridge.
+    pub along: Wander,
+    /// 1σ across the ridge, sky units.
+    pub across: f64,
+    /// Change of the bearing with distance there, degrees per sky unit.
+    pub turn_deg: f64,
+}
+
+impl RidgeEnd {
+    /// 1σ of the bearing from the core, degrees.
+    pub fn bearing_sigma_deg(&self) -> f64 {
+        let aside = (self.across / self.offset.radius().max(f64::MIN_POSITIVE)).to_degrees();
+        aside.hypot(self.turn_deg * self.along.sigma())
+    }
 }
 
 impl Ridge {
@@ -70,15 +107,98 @@ impl Ridge {
         wrap_directed_deg(a.bearing_deg + t * wrap_difference_deg(b.bearing_deg - a.bearing_deg))
     }
 
-    /// Length along the ridge from the core to its last point.
-    pub fn length(&self) -> f64 {
+    /// Length along the ridge from the core to its end, in chords of at least `chord`: shorter
+    /// ones would count the noise of the points' places.
+    pub fn length(&self, chord: f64) -> f64 {
+        let Some(end) = &self.end else { return 0.0 };
         let mut previous = SkyOffset::default();
         let mut sum = 0.0;
-        for point in &self.points {
-            sum += point.offset.minus(previous).radius();
-            previous = point.offset;
+        for point in self.points.iter().filter(|p| p.distance < end.offset.radius() - chord) {
+            let step = point.offset.minus(previous).radius();
+            if step >= chord {
+                sum += step;
+                previous = point.offset;
+            }
         }
-        sum
+        sum + end.offset.minus(previous).radius()
+    }
+}
+
+/// Fewest points from which an opening angle or an exponent is taken.
+const LEAST_WIDTHS: usize = 3;
+/// Error of a width beside the noise, as a share of the beam's: interpolation between pixels
+/// and the beam as described.
+const WIDTH_SHARE: f64 = 0.01;
+/// An exponent needs points whose distances differ by this factor.
+const LEAST_SPAN: f64 = 1.5;
+
+impl Ridge {
+    fn between(&self, (inner, outer): (f64, f64)) -> impl Iterator<Item = &RidgePoint> {
+        self.points.iter().filter(move |p| p.distance >= inner && p.distance < outer)
+    }
+
+    /// Full opening angle 2 atan(½ w/d), w the width with the beam taken off and d the distance
+    /// from the core: that of the median of w²/d² over the points between two distances. A point
+    /// that noise makes narrower than the beam counts with its negative square, so that the
+    /// median of unresolved points has no bias. An upper limit where it is not 2σ above zero.
+    pub fn opening_angle_deg(
+        &self,
+        ends: (f64, f64),
+        beam_major: f64,
+        confidence: f64,
+    ) -> Measurement {
+        let mut squares = Vec::new();
+        let (mut variance, mut share) = (0.0, 0.0);
+        for point in self.between(ends) {
+            let Measurement::Value { value: width, minus, .. } = point.width else { continue };
+            let area = point.distance * point.distance;
+            squares.push((width * width - point.beam_width * point.beam_width) / area);
+            variance += (2.0 * width * minus / area).powi(2);
+            share += 2.0 * WIDTH_SHARE * point.beam_width * point.beam_width / area;
+        }
+        let count = squares.len() as f64;
+        let Some(square) = median(&mut squares).filter(|_| squares.len() >= LEAST_WIDTHS) else {
+            return Measurement::missing(Because::Unresolved);
+        };
+        // Points within a beam share their noise; a median scatters 1.25 times more than a mean.
+        let beams = ((ends.1 - ends.0) / beam_major).clamp(1.0, count);
+        let sigma = (1.25 * (variance / count / beams).sqrt()).hypot(share / count);
+        let angle = |square: f64| 2.0 * (0.5 * square.max(0.0).sqrt()).atan().to_degrees();
+        if square >= 2.0 * sigma {
+            Measurement::symmetric(square, sigma)
+                .with_ci95(square - 1.96 * sigma, square + 1.96 * sigma)
+                .increasing(angle)
+        } else {
+            let z = normal_deviate(confidence);
+            Measurement::upper_limit(angle(square.max(0.0) + z * sigma), confidence)
+        }
+    }
+
+    /// Exponent k of width ∝ distance^k: slope of ln(deconvolved width) against ln(distance),
+    /// weighted by the widths' errors, over resolved points between two distances. `None` with
+    /// too few of them or too short a span.
+    pub fn width_exponent(&self, ends: (f64, f64)) -> Option<f64> {
+        let points: Vec<(f64, f64, f64)> = self
+            .between(ends)
+            .filter_map(|p| match p.width_deconvolved {
+                Measurement::Value { value, minus, .. } if value > 0.0 && minus > 0.0 => {
+                    Some((p.distance.ln(), value.ln(), (value / minus).powi(2)))
+                }
+                _ => None,
+            })
+            .collect();
+        let (first, last) = (points.first()?.0, points.last()?.0);
+        if points.len() < 2 * LEAST_WIDTHS || last - first < LEAST_SPAN.ln() {
+            return None;
+        }
+        let total: f64 = points.iter().map(|p| p.2).sum();
+        let mean = |f: fn(&(f64, f64, f64)) -> f64| {
+            points.iter().map(|p| p.2 * f(p)).sum::<f64>() / total
+        };
+        let (x, y) = (mean(|p| p.0), mean(|p| p.1));
+        let product: f64 = points.iter().map(|p| p.2 * (p.0 - x) * (p.1 - y)).sum();
+        let square: f64 = points.iter().map(|p| p.2 * (p.0 - x).powi(2)).sum();
+        (square > 0.0).then(|| product / square)
     }
 }
 
@@ -128,11 +248,11 @@ pub fn trace_ridges(window: &Window, context: &RidgeContext) -> [Ridge; 2] {
     let polar = sample_polar(window, context);
     let starts = starting_directions(&polar, context);
     let mut ridges =
-        starts.map(|start_deg| Ridge { start_deg, detected: false, points: Vec::new() });
+        starts.map(|start_deg| Ridge { start_deg, detected: false, points: Vec::new(), end: None });
     for side in 0..2 {
         let (own, other) = (starts[side], starts[1 - side]);
         let path = best_path(&polar, own, other);
-        ridges[side].points = crest_points(window, context, &polar, &path);
+        (ridges[side].points, ridges[side].end) = crest_points(window, context, &polar, &path);
         ridges[side].detected =
             ridges[side].points.last().is_some_and(|p| p.distance > context.beam.major);
     }
@@ -140,6 +260,7 @@ pub fn trace_ridges(window: &Window, context: &RidgeContext) -> [Ridge; 2] {
     for side in 0..2 {
         if !ridges[side].detected && ridges[1 - side].detected {
             ridges[side].points.clear();
+            ridges[side].end = None;
             ridges[side].start_deg = wrap_directed_deg(starts[1 - side] + 180.0);
         }
     }
@@ -155,7 +276,8 @@ fn sample_polar(window: &Window, context: &RidgeContext) -> Polar {
         }
     }
     let first = 0.5 * beam.minor;
-    let farthest = farthest + 0.5 * beam.major;
+    // Somewhat farther: how the brightness fades beyond its end tells how sure the end is.
+    let farthest = farthest + 1.5 * beam.major;
     let fine = (beam.minor / 3.0).max(0.5 * context.frame.mean_scale());
     let circles = (((farthest - first) / fine).ceil().max(1.0) as usize).min(MOST_CIRCLES);
     let step = ((farthest - first) / circles as f64).max(f64::MIN_POSITIVE);
@@ -309,7 +431,7 @@ fn crest_points(
     context: &RidgeContext,
     polar: &Polar,
     path: &[usize],
-) -> Vec<RidgePoint> {
+) -> (Vec<RidgePoint>, Option<RidgeEnd>) {
     let beam = context.beam;
     let on_circle = |distance: f64, bearing: f64| {
         window.cubic(context.frame.pixel(SkyOffset::polar(distance, bearing)))
@@ -360,16 +482,67 @@ fn crest_points(
             rms,
             width: Measurement::missing(Because::Unresolved),
             width_deconvolved: Measurement::missing(Because::Unresolved),
+            beam_width: beam.mean_fwhm(),
         });
     }
+    let profile = points.clone();
     points.truncate(last);
     for k in 0..points.len() {
         let direction = local_direction(&points, k);
         let (width, deconvolved) = transverse_width(window, context, &points[k], direction);
         points[k].width = width;
         points[k].width_deconvolved = deconvolved;
+        points[k].beam_width = context.beam.projected_fwhm(direction);
     }
-    points
+    let end = ridge_end(&points, &profile, context);
+    (points, end)
+}
+
+/// Beams inside a ridge's last point from which on its end is looked for.
+const END_BEAMS: f64 = 3.0;
+
+/// Where a ridge ends. `profile` holds its points and those beyond.
+///
+/// A crest is the highest of all places across the ridge: for a Gaussian profile of FWHM W and
+/// brightness B and noise smoothed by a beam of FWHM b the noise raises it by ¼ (W/b)² rms²/B
+/// on the mean, and moves it aside by 0.30 W²/b · rms/B (both where the noise's gradient,
+/// 1.67 rms/b, cancels that of the profile, 8 ln 2 B d/W²).
+fn ridge_end(
+    points: &[RidgePoint],
+    profile: &[RidgePoint],
+    context: &RidgeContext,
+) -> Option<RidgeEnd> {
+    let last = points.last()?;
+    let beam = context.beam;
+    let direction = local_direction(points, points.len() - 1);
+    let beam_width = beam.projected_fwhm(direction);
+    let width = points.iter().rev().find_map(|p| p.width.best()).unwrap_or(beam_width);
+    let ratio = (width / beam_width).max(1.0);
+    let excess: Vec<ProfilePoint> = profile
+        .iter()
+        .map(|p| {
+            let raised = (0.25 * ratio * ratio / p.signal_to_noise().max(1.0)).min(1.0);
+            let level = context.outline_sigma + raised;
+            ProfilePoint { distance: p.distance, excess: p.brightness - level * p.rms, rms: p.rms }
+        })
+        .collect();
+    let along_beam = beam.reach_along(direction);
+    let from = (last.distance - END_BEAMS * along_beam).max(0.0);
+    let (raw, along) = last_above(&excess, from, along_beam).unwrap_or((last.distance, Wander::default()));
+    let distance = (raw - along.bias).max(0.5 * last.distance);
+    let bearing_at = |d: f64| {
+        let next = profile.partition_point(|p| p.distance <= d).clamp(1, profile.len().max(2) - 1);
+        let (Some(a), Some(b)) = (profile.get(next - 1), profile.get(next)) else {
+            return last.bearing_deg;
+        };
+        let t = ((d - a.distance) / (b.distance - a.distance)).clamp(0.0, 1.0);
+        a.bearing_deg + t * wrap_difference_deg(b.bearing_deg - a.bearing_deg)
+    };
+    let bearing_deg = bearing_at(distance);
+    let back = distance - (along.sigma() + along_beam).min(0.5 * distance);
+    let turn_deg = wrap_difference_deg(bearing_deg - bearing_at(back)) / (distance - back).max(f64::MIN_POSITIVE);
+    let across = (0.30 * ratio * ratio * beam_width / context.outline_sigma).min(0.42 * width);
+    Some(RidgeEnd { offset: SkyOffset::polar(distance, wrap_directed_deg(bearing_deg)), along, across, turn_deg })
 }
 
 /// Whether an offset falls on or next to a member pixel.

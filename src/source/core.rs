@@ -329,7 +329,7 @@ pub fn fit_point_on_jets(
 ///
 /// A line across an elliptical beam is blurred along it by the beam's cut in its direction;
 /// that the two are not independent for a tilted beam is left out.
-fn half_line(beam: &Beam, offset: SkyOffset, bearing_deg: f64) -> f64 {
+pub(super) fn half_line(beam: &Beam, offset: SkyOffset, bearing_deg: f64) -> f64 {
     let along = offset.dot(SkyOffset::polar(1.0, bearing_deg));
     let across = offset.dot(SkyOffset::polar(1.0, bearing_deg + 90.0));
     let width = beam.projected_fwhm(bearing_deg);
@@ -493,7 +493,7 @@ fn linear_fit(design: &[[f64; 6]], values: &[f64], columns: usize) -> Option<Lin
 
 /// Inverse of a symmetric positive-definite matrix by Gauss–Jordan elimination with scaling;
 /// `None` where it is singular to working precision.
-fn invert_symmetric(matrix: &[Vec<f64>]) -> Option<Vec<Vec<f64>>> {
+pub(super) fn invert_symmetric(matrix: &[Vec<f64>]) -> Option<Vec<Vec<f64>>> {
     let n = matrix.len();
     let scale: Vec<f64> = (0..n).map(|i| matrix[i][i].sqrt()).collect();
     if scale.iter().any(|s| !(s.is_finite() && *s > 0.0)) {

@@ -3,6 +3,7 @@
 
 pub mod associate;
 pub mod core;
+pub mod hotspot;
 pub mod sides;
 
 use image::{GrayImage, Luma};
@@ -23,7 +24,7 @@ use self::associate::SourceRegions;
 use self::core::{
     CORE_DETECTION_SIGMA, Core, KnownCore, Peak, PointFit, choose_core, fit_point_on_jets,
 };
-use self::sides::{SideFeatures, find_features, side_of};
+use self::sides::{FeatureInput, SideFeatures, find_features, side_of};
 
 /// What the source stages need to know of the map.
 #[derive(Clone, Copy)]
@@ -158,8 +159,16 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
             z_confidence: input.z_confidence,
         };
         let ridges = trace_ridges(&coreless, &context);
-        let features =
-            find_features(&peaks, &points, &ridges, &frame, input.beam, level, core.fit.is_some());
+        let features = find_features(&FeatureInput {
+            peaks: &peaks,
+            contour: &points,
+            ridges: &ridges,
+            frame: &frame,
+            beam: input.beam,
+            core_detected: core.fit.is_some(),
+            window: &coreless,
+            noise: (input.noise, input.correlation),
+        });
         (ridges, features)
     });
     if let Some((ridges, features)) = &sides

@@ -5,9 +5,10 @@ use crate::extent::maximum_sigma;
 use crate::map::beam::Beam;
 use crate::map::geometry::LocalFrame;
 use crate::noise::{Noise, NoiseCorrelation};
-use crate::ridge::Ridge;
+use crate::ridge::{Ridge, RidgePoint};
 use crate::source::core::Peak;
-use crate::source::hotspot::{SpotFit, fit_spot, variance_along};
+use crate::source::hotspot::{fit_spot, variance_along};
+use crate::stats::median;
 use crate::units::{Pixel, SkyOffset, wrap_difference_deg};
 use crate::window::Window;
 
@@ -52,23 +53,34 @@ pub struct SideFeatures {
 /// A hot spot is at least this bright against the side's brightest peak: knots may outshine
 /// it, but a speck at the end of a fading jet is none.
 const HOTSPOT_BRIGHTNESS: f64 = 0.25;
-/// Beyond a hot spot, 1.5 beams farther out, the brightness has fallen below this share of
-/// it: a jet or plume that goes on is brighter. Hot spots exceed their surroundings four
-/// times (criterion of Bridle et al. 1994, AJ 108, 766; from memory), and lie at the end of the
-/// jet (another of theirs).
+/// 1.5 beams from a hot spot the brightness has fallen below this share of its: the median all
+/// around (what is wider than about two beams is a lobe's or plume's maximum), and the highest
+/// outwards (a jet or plume that goes on is brighter). Hot spots exceed their surroundings four
+/// times and lie at the end of the jet (two criteria of Bridle et al. 1994, AJ 108, 766, from
+/// memory; their third, a twentieth of the source's size, is not resolved by most maps).
 const HOTSPOT_SURROUNDINGS: f64 = 0.25;
-/// Where surroundings are compared, in beams from the spot, and how far to either side of the
-/// outward direction.
+/// Many lobes have no compact spot on the maps we get. Their head counts as the hot spot where
+/// it is the brightest of its side to this share, where this share of its brightness is left
+/// 1.5 beams around it (a bump in a jet is narrower), where it has fallen to 0.6 two beams outwards,
+/// and where the way from the core is three times fainter somewhere: the side is
+/// edge-brightened (own choice on real survey maps).
+const LOBE_BRIGHTNESS: f64 = 0.75;
+const LOBE_WIDTH: f64 = 0.2;
+const LOBE_BEAMS: f64 = 2.0;
+const LOBE_FALL: f64 = 0.6;
+const LOBE_CONTRAST: f64 = 1.0 / 3.0;
+/// A fit counts fully where half as much again as this share of the brightness is shaped as the
+/// beam, and not at all below it.
+const LEAST_COMPONENT: f64 = 0.35;
+/// Where surroundings are compared, in beams from the spot; at how many places; and how far
+/// from the direction away from the core a place counts as outward.
 const SURROUNDINGS_BEAMS: f64 = 1.5;
+const SURROUNDINGS_PLACES: u32 = 24;
 const SURROUNDINGS_DEG: f64 = 60.0;
-/// Least share of a hot spot's brightness that is shaped as the beam: what is wider than
-/// about two beams is a lobe's or plume's maximum (they ask for a twentieth of the source's
-/// size, which most maps do not resolve).
-const HOTSPOT_COMPACT: f64 = 0.4;
 /// Peaks nearer to a detected core than this many beams are its own.
 const CORE_BEAMS: f64 = 0.6;
 /// Hot spots are looked for beyond this many beams.
-const HOTSPOT_BEYOND_BEAMS: f64 = 1.0;
+const HOTSPOT_BEYOND_BEAMS: f64 = 0.6;
 /// Brightest points are looked for beyond this many beams from the core (definition of the
 /// Fanaroff–Riley ratio in the record).
 pub const BRIGHTEST_BEYOND_BEAMS: f64 = 1.5;
@@ -133,7 +145,7 @@ pub fn find_features(input: &FeatureInput) -> [SideFeatures; 2] {
     for ((side, peaks), ridge) in sides.iter_mut().zip(&mut peaks).zip(ridges) {
         // From the farthest to the nearest.
         peaks.sort_by(|a, b| b.1.radius().total_cmp(&a.1.radius()));
-        side.hotspot = hotspot(input, peaks);
+        side.hotspot = hotspot(input, ridge, peaks);
         let beyond = BRIGHTEST_BEYOND_BEAMS * beam.major;
         let outer: Vec<_> = peaks.iter().copied().filter(|p| p.1.radius() >= beyond).collect();
         side.brightest = brightest(input, ridge, &outer);
@@ -147,37 +159,118 @@ pub fn find_features(input: &FeatureInput) -> [SideFeatures; 2] {
 ///
 /// Of a double of doubles this is the inner pair, as long as the outer lobes hold no hot spot
 /// of their own any more.
-fn hotspot(input: &FeatureInput, peaks: &[(Peak, SkyOffset)]) -> Option<Feature> {
+fn hotspot(input: &FeatureInput, ridge: &Ridge, peaks: &[(Peak, SkyOffset)]) -> Option<Feature> {
     let beyond = HOTSPOT_BEYOND_BEAMS * input.beam.major;
     let outer = || peaks.iter().filter(|p| p.1.radius() > beyond);
     let highest = outer().map(|p| p.0.value).fold(0.0, f64::max);
-    outer().filter(|p| p.0.value >= HOTSPOT_BRIGHTNESS * highest).find_map(|&(peak, offset)| {
+    outer().find_map(|&(peak, offset)| {
         let outward_deg = offset.position_angle_deg();
+        let share = peak.value / highest;
+        let near = Surroundings::of(input, &peak, outward_deg, SURROUNDINGS_BEAMS);
+        if !(share >= HOTSPOT_BRIGHTNESS && near.is_compact_end()
+            || share >= LOBE_BRIGHTNESS && is_lobe(input, ridge, &peak, offset, &near))
+        {
+            return None;
+        }
         let FeatureInput { window, beam, frame, noise, .. } = *input;
-        let spot = fit_spot(window, peak.pixel, outward_deg + 180.0, beam, frame, noise)?;
-        let compact = spot.component >= HOTSPOT_COMPACT * spot.brightness;
-        (compact && ends_here(input, &spot, outward_deg)).then(|| Feature {
-            peak: Peak { pixel: spot.pixel, value: spot.brightness, ..peak },
-            offset: frame.offset(spot.pixel),
-            covariance: spot.covariance,
-            brightness_sigma: spot.brightness_sigma,
+        let fit = fit_spot(window, peak.pixel, outward_deg + 180.0, beam, frame, noise);
+        let (pixel, value, covariance, brightness_sigma) = match fit {
+            Some(spot) => {
+                // A maximum too broad for a beam-shaped component is where it seems to be.
+                let share = spot.component / spot.brightness;
+                let trust = ((share - LEAST_COMPONENT) / LEAST_COMPONENT).clamp(0.0, 0.5) * 2.0;
+                let shift = frame.difference(peak.pixel, spot.pixel);
+                let mut covariance = spot.covariance;
+                widen(&mut covariance, shift, 1.0 - trust);
+                let value = peak.value + trust * (spot.brightness - peak.value);
+                let pixel = frame.moved(peak.pixel, shift.times(trust));
+                (pixel, value, covariance, spot.brightness_sigma)
+            }
+            None => {
+                let rms = peak.value / peak.signal_to_noise.max(1.0);
+                (peak.pixel, peak.value, maximum_covariance(input, &peak, outward_deg), rms)
+            }
+        };
+        Some(Feature {
+            peak: Peak { pixel, value, ..peak },
+            offset: frame.offset(pixel),
+            covariance,
+            brightness_sigma,
         })
     })
 }
 
-/// Whether the brightness falls off beyond a spot. Two rms are allowed for the highest of the
-/// few places looked at.
-fn ends_here(input: &FeatureInput, spot: &SpotFit, outward_deg: f64) -> bool {
-    let rms = input.window.rms_at(spot.pixel).unwrap_or(0.0);
-    let steps = 8;
-    (-steps / 2..=steps / 2)
-        .filter_map(|k| {
-            let pa_deg = outward_deg + 2.0 * SURROUNDINGS_DEG * f64::from(k) / f64::from(steps);
-            let reach = SURROUNDINGS_BEAMS * input.beam.reach_along(pa_deg);
-            let at = input.frame.moved(spot.pixel, SkyOffset::polar(reach, pa_deg));
-            input.window.bilinear(at)
-        })
-        .all(|brightness| brightness - 2.0 * rms <= HOTSPOT_SURROUNDINGS * spot.brightness)
+/// What a peak stands in, over its own brightness.
+struct Surroundings {
+    /// The highest brightness outwards.
+    outward: f64,
+    /// The median brightness all around.
+    around: f64,
+    /// The rms.
+    rms: f64,
+}
+
+impl Surroundings {
+    fn of(input: &FeatureInput, peak: &Peak, outward_deg: f64, beams: f64) -> Self {
+        let rms = input.window.rms_at(peak.pixel).unwrap_or(0.0);
+        let places: Vec<(bool, f64)> = (0..SURROUNDINGS_PLACES)
+            .filter_map(|k| {
+                let turn = 360.0 * f64::from(k) / f64::from(SURROUNDINGS_PLACES);
+                let pa_deg = outward_deg + turn;
+                let reach = beams * input.beam.reach_along(pa_deg);
+                let at = input.frame.moved(peak.pixel, SkyOffset::polar(reach, pa_deg));
+                let is_outward = wrap_difference_deg(turn).abs() <= SURROUNDINGS_DEG;
+                Some((is_outward, input.window.bilinear(at)?))
+            })
+            .collect();
+        let outward = places.iter().filter(|p| p.0).map(|p| p.1).fold(0.0, f64::max);
+        let mut all: Vec<f64> = places.iter().map(|p| p.1).collect();
+        Self {
+            outward: outward / peak.value,
+            rms: rms / peak.value,
+            around: median(&mut all).unwrap_or(0.0) / peak.value,
+        }
+    }
+
+    /// Two rms are allowed for the highest of the few places looked at.
+    fn is_compact_end(&self) -> bool {
+        self.outward - 2.0 * self.rms <= HOTSPOT_SURROUNDINGS && self.around <= HOTSPOT_SURROUNDINGS
+    }
+}
+
+/// Whether a peak is the head of a lobe: wider than a jet, falling off beyond it, and far
+/// brighter than the faintest place of the ridge on its way from the core.
+fn is_lobe(
+    input: &FeatureInput,
+    ridge: &Ridge,
+    peak: &Peak,
+    offset: SkyOffset,
+    near: &Surroundings,
+) -> bool {
+    let way = |p: &&RidgePoint| p.distance > input.beam.major && p.distance < offset.radius();
+    let faintest = ridge.points.iter().filter(way).map(|p| p.brightness).fold(peak.value, f64::min);
+    near.around >= LOBE_WIDTH
+        && faintest <= LOBE_CONTRAST * peak.value
+        && Surroundings::of(input, peak, offset.position_angle_deg(), LOBE_BEAMS).outward
+            <= LOBE_FALL
+}
+
+/// Covariance of a local maximum's place from noise alone.
+fn maximum_covariance(input: &FeatureInput, peak: &Peak, pa_deg: f64) -> [f64; 3] {
+    let FeatureInput { window, beam, frame, .. } = *input;
+    let mut covariance = [0.0; 3];
+    for pa_deg in [pa_deg, pa_deg + 90.0] {
+        let sigma = maximum_sigma(window, frame, beam, peak.pixel, pa_deg);
+        widen(&mut covariance, SkyOffset::polar(sigma, pa_deg), 1.0);
+    }
+    covariance
+}
+
+/// Adds the scatter of a shift that happens with some probability.
+fn widen(covariance: &mut [f64; 3], shift: SkyOffset, probability: f64) {
+    covariance[0] += probability * shift.east * shift.east;
+    covariance[1] += probability * shift.east * shift.north;
+    covariance[2] += probability * shift.north * shift.north;
 }
 
 /// The brightest of the peaks that stand out. Where others are as bright within the noise, the
@@ -187,28 +280,16 @@ fn brightest(
     ridge: &Ridge,
     peaks: &[(Peak, SkyOffset)],
 ) -> Option<Feature> {
-    let FeatureInput { window, beam, frame, .. } = *input;
     let standing: Vec<_> =
         peaks.iter().copied().filter(|(p, o)| stands_out(input, ridge, p, *o)).collect();
-    let &(peak, offset) =
-        standing.iter().max_by(|a, b| a.0.value.total_cmp(&b.0.value))?;
+    let &(peak, offset) = standing.iter().max_by(|a, b| a.0.value.total_cmp(&b.0.value))?;
     let rms = peak.value / peak.signal_to_noise.max(1.0);
-    let pa_deg = offset.position_angle_deg();
-    let square = |pa_deg: f64| maximum_sigma(window, frame, beam, peak.pixel, pa_deg).powi(2);
-    let (along, across) = (SkyOffset::polar(1.0, pa_deg), SkyOffset::polar(1.0, pa_deg + 90.0));
-    let mut covariance = [0.0; 3];
-    let mut add = |unit: SkyOffset, variance: f64| {
-        covariance[0] += variance * unit.east * unit.east;
-        covariance[1] += variance * unit.east * unit.north;
-        covariance[2] += variance * unit.north * unit.north;
-    };
-    add(along, square(pa_deg));
-    add(across, square(pa_deg + 90.0));
+    let mut covariance = maximum_covariance(input, &peak, offset.position_angle_deg());
     // Weights of the peaks by how probably each is the brightest.
     let weight = |p: &Peak| (-((peak.value - p.value) / (2.0 * rms)).powi(2)).exp();
     let total: f64 = standing.iter().map(|(p, _)| weight(p)).sum();
     for (other, place) in &standing {
-        add(place.minus(offset), weight(other) / total);
+        widen(&mut covariance, place.minus(offset), weight(other) / total);
     }
     Some(Feature { peak, offset, covariance, brightness_sigma: rms })
 }

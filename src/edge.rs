@@ -20,7 +20,7 @@ use crate::stats::{normal_deviate, sorted_quantile};
 /// What noise does to an outermost point.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]
 pub struct Wander {
-    /// How far the noise has carried it outwards on the mean.
+    /// How far the noise has carried it outwards, in the median.
     pub bias: f64,
     /// How far the true end may lie inside the corrected one: 1σ.
     pub minus: f64,
@@ -32,14 +32,10 @@ impl Wander {
     /// From the ends that noise makes of one.
     fn of(mut ends: Vec<f64>) -> Self {
         ends.sort_by(f64::total_cmp);
-        let mean = ends.iter().sum::<f64>() / ends.len().max(1) as f64;
-        let at = |q: f64| sorted_quantile(&ends, q).unwrap_or(mean);
+        let at = |q: f64| sorted_quantile(&ends, q).unwrap_or(0.0);
+        let bias = at(0.5);
         // An end that was carried out lies farther in than it seems.
-        Self {
-            bias: mean,
-            minus: (at(0.841_345) - mean).max(0.0),
-            plus: (mean - at(0.158_655)).max(0.0),
-        }
+        Self { bias, minus: at(0.841_345) - bias, plus: bias - at(0.158_655) }
     }
 
     /// 1σ, the mean of both sides.
@@ -55,8 +51,26 @@ pub struct OutlinePoint {
     pub reach: f64,
     /// Place along the outline, in beams.
     pub aside: f64,
-    /// Outward length over which the brightness falls by a factor e.
-    pub scale: f64,
+    /// Outward slope of the logarithm of the brightness there, positive where it falls.
+    pub slope: f64,
+    /// Half its change with distance, ≥ 0: the logarithm falls by slope · d + change · d².
+    pub change: f64,
+}
+
+impl OutlinePoint {
+    /// Where the logarithm of the brightness differs by this much from that at the point.
+    fn moved(&self, by: f64) -> f64 {
+        let square = self.slope * self.slope - 4.0 * self.change * by;
+        if self.change > 0.0 && square > 0.0 {
+            // The root that goes over into −by/slope, without loss of digits.
+            -2.0 * by / (self.slope + square.sqrt())
+        } else if square <= 0.0 {
+            // Inside a summit the profile has no such place.
+            -0.5 * self.slope / self.change
+        } else {
+            -by / self.slope
+        }
+    }
 }
 
 /// Step of the lines of noise in beams, and their reach to each side in steps.
@@ -122,9 +136,8 @@ fn ends(mut end: impl FnMut(&dyn Fn(f64) -> f64) -> f64) -> Vec<f64> {
 /// What noise does to the outermost of an outline's points; `noise_share` is the rms over the
 /// outline's level.
 ///
-/// Noise of n rms moves a point to where the brightness without it is level − n rms: outwards
-/// by −scale · ln(1 − n rms/level) where the brightness falls exponentially, so that an end is
-/// carried out farther than in.
+/// Noise of n rms moves a point to where the brightness without it is level − n rms: where its
+/// logarithm has fallen by −ln(1 − n rms/level). An end is carried out farther than in.
 pub fn wander_of_outline(points: &[OutlinePoint], noise_share: f64) -> Wander {
     if points.is_empty() {
         return Wander::default();
@@ -134,7 +147,7 @@ pub fn wander_of_outline(points: &[OutlinePoint], noise_share: f64) -> Wander {
             .iter()
             .map(|p| {
                 let share = (noise(p.aside) * noise_share).min(MOST_SHARE);
-                p.reach - p.scale * (-share).ln_1p()
+                p.reach + p.moved((-share).ln_1p())
             })
             .fold(f64::NEG_INFINITY, f64::max)
     });
@@ -213,7 +226,7 @@ mod tests {
     fn a_pointed_end_moves_with_its_noise_and_a_flat_one_is_carried_out() {
         // One point alone: the noise's own scatter, ± scale × share, and a skewed mean of
         // scale × share²/2 in second order.
-        let point = |aside: f64| OutlinePoint { reach: 0.0, aside, scale: 1.0 };
+        let point = |aside: f64| OutlinePoint { reach: 0.0, aside, slope: 1.0, change: 0.0 };
         let alone = wander_of_outline(&[point(0.0)], 0.01);
         assert!((alone.sigma() / 0.01 - 1.0).abs() < 0.25, "{alone:?}");
         assert!(alone.bias.abs() < 2e-4, "{alone:?}");

@@ -157,32 +157,77 @@ impl Outline<'_> {
                 if aside.abs() > near || offset.dot(unit).abs() > near {
                     return None;
                 }
-                let scale = self.fading(p, unit)?;
-                Some(OutlinePoint { reach: behind(p).min(0.0), aside: aside / width, scale })
+                let (slope, change) = self.fading(p, unit)?;
+                let reach = behind(p).min(0.0);
+                Some(OutlinePoint { reach, aside: aside / width, slope, change })
             })
             .collect();
         wander_of_outline(&points, rms / self.level.max(f64::MIN_POSITIVE))
     }
 
-    /// Outward length over which the brightness at a point of the contour falls by a factor e:
-    /// the level over the slope, taken over half a beam; `None` where it does not fall. No
-    /// longer than two beams.
-    fn fading(&self, at: Pixel, unit: SkyOffset) -> Option<f64> {
-        let step = 0.35 * self.beam.minor;
-        let slope = |direction: SkyOffset| {
-            let sample = |sign: f64| {
-                self.window.bilinear(self.frame.moved(at, direction.times(sign * step)))
-            };
-            Some((sample(-1.0)? - sample(1.0)?) / (2.0 * step))
+    /// How the brightness falls outwards at a point of the contour: slope of its logarithm
+    /// and half its change, from the distances inwards at which it has doubled and doubled
+    /// again: far enough that noise does not make the slope. `None` where it does not fall.
+    fn fading(&self, at: Pixel, unit: SkyOffset) -> Option<(f64, f64)> {
+        let beam = self.beam.minor;
+        let inside = |direction: SkyOffset, distance: f64| {
+            self.window.bilinear(self.frame.moved(at, direction.times(-distance)))
+        };
+        let drop = |direction: SkyOffset| {
+            Some(inside(direction, 0.5 * beam)? - inside(direction, -0.5 * beam)?)
         };
         let (outward, aside) =
-            (slope(unit)?, slope(SkyOffset::new(-unit.north, unit.east)).unwrap_or(0.0));
+            (drop(unit)?, drop(SkyOffset::new(-unit.north, unit.east)).unwrap_or(0.0));
+        if outward <= 0.0 {
+            return None;
+        }
         // The contour moves along its normal; only the share along the extent counts.
-        let steepest = outward.hypot(aside).max(f64::MIN_POSITIVE);
-        let longest = 2.0 * self.beam.major;
-        (outward > 0.0).then(|| (self.level / steepest).min(longest) * (outward / steepest))
+        let cosine = outward / outward.hypot(aside);
+        let normal = SkyOffset::new(
+            unit.east * outward - unit.north * aside,
+            unit.north * outward + unit.east * aside,
+        );
+        let normal = normal.times(1.0 / normal.radius());
+        let step = 0.125 * beam;
+        let (mut doubled, mut highest) = ([None; 2], (self.level, 0.0));
+        let mut before = self.level;
+        for k in 1..=MOST_STEPS {
+            let distance = f64::from(k) * step;
+            let Some(value) = inside(normal, distance) else { break };
+            for (found, factor) in doubled.iter_mut().zip([2.0, 4.0]) {
+                let wanted = factor * self.level;
+                if found.is_none() && value >= wanted {
+                    let back = step * (value - wanted) / (value - before).max(f64::MIN_POSITIVE);
+                    *found = Some(distance - back.min(step));
+                }
+            }
+            if value > highest.0 {
+                highest = (value, distance);
+            }
+            before = value;
+            if doubled[1].is_some() {
+                break;
+            }
+        }
+        let two = std::f64::consts::LN_2;
+        let least = 0.5 / self.beam.major;
+        let (slope, change) = match doubled {
+            [Some(d), Some(e)] if e > d => {
+                let slope = two * (e * e - 2.0 * d * d) / (d * e * (e - d));
+                let change = (slope * d - two) / (d * d);
+                // A profile that flattens outwards counts as straight.
+                if change > 0.0 { (slope, change) } else { (two / d, 0.0) }
+            }
+            [Some(d), _] => (two / d, 0.0),
+            _ if highest.1 > 0.0 => ((highest.0 / self.level).ln() / highest.1, 0.0),
+            _ => (least, 0.0),
+        };
+        Some((slope.max(least) / cosine, change / (cosine * cosine)))
     }
 }
+
+/// Steps of an eighth of a beam inwards over which the brightness is looked at: four beams.
+const MOST_STEPS: u32 = 32;
 
 impl Extent {
     /// The length without what noise has carried its ends out.

@@ -107,20 +107,38 @@ impl Ridge {
         wrap_directed_deg(a.bearing_deg + t * wrap_difference_deg(b.bearing_deg - a.bearing_deg))
     }
 
-    /// Length along the ridge from the core to its end, in chords of at least `chord`: shorter
-    /// ones would count the noise of the points' places.
-    pub fn length(&self, chord: f64) -> f64 {
-        let Some(end) = &self.end else { return 0.0 };
+    /// Length along the ridge from the core to its end with its 1σ downwards and upwards; the
+    /// core's own error is not counted. `beam` is the beam's mean width.
+    ///
+    /// Chords of a beam's length join the points that stand above the threshold, straight over
+    /// gaps between them. Noise that moves points aside lengthens each chord c by s²/c on the
+    /// mean (s: 1σ of a point across the ridge), which is taken off. How sure the path is
+    /// follows from chords three times as long: a path that winds within a few beams is told
+    /// from one that wanders with noise or between several crests only as well as the two agree.
+    pub fn length(&self, beam: f64, threshold: f64) -> Option<(f64, f64, f64)> {
+        let end = self.end.as_ref()?;
+        let (fine, noise) = self.chords(end.offset, beam, threshold);
+        let (coarse, _) = self.chords(end.offset, 3.0 * beam, threshold);
+        let path = noise.hypot(0.5 * (fine - noise - coarse));
+        let length = (fine - noise).max(end.offset.radius());
+        Some((length, end.along.minus.hypot(path), end.along.plus.hypot(path)))
+    }
+
+    /// Sum of chords of at least a length, and what noise adds to it on the mean.
+    fn chords(&self, end: SkyOffset, least: f64, threshold: f64) -> (f64, f64) {
         let mut previous = SkyOffset::default();
-        let mut sum = 0.0;
-        for point in self.points.iter().filter(|p| p.distance < end.offset.radius() - chord) {
+        let (mut sum, mut noise) = (0.0, 0.0);
+        let inside = end.radius() - least;
+        let bright = |p: &&RidgePoint| p.signal_to_noise() >= threshold;
+        for point in self.points.iter().filter(bright).filter(|p| p.distance < inside) {
             let step = point.offset.minus(previous).radius();
-            if step >= chord {
+            if step >= least {
                 sum += step;
+                noise += point.aside_sigma().powi(2) / step;
                 previous = point.offset;
             }
         }
-        sum + end.offset.minus(previous).radius()
+        (sum + end.minus(previous).radius(), noise)
     }
 }
 
@@ -592,7 +610,9 @@ fn local_direction(points: &[RidgePoint], k: usize) -> f64 {
 
 /// FWHM of the transverse profile from its half-maximum crossings, and the same with the
 /// beam's projected width taken off in quadrature. Missing where the profile does not fall
-/// to half on both sides within three beams, or the crest is below 5σ.
+/// to half on both sides within three beams, or the crest is below 5σ. Diffuse emission under
+/// the ridge is taken off: the lower of the two brightnesses 1.5 widths aside, where it stands
+/// 2 rms high; half of what that changes counts as an error, since it need not be flat.
 ///
 /// Error: a crossing moves by (rms / slope); the slope of a Gaussian at half maximum is
 /// peak × 4 ln 2 / (2 FWHM) × 2 = peak × 1.386 / FWHM, so that both crossings together give
@@ -613,14 +633,15 @@ fn transverse_width(
     }
     let step = 0.1 * context.beam.minor;
     let reach = (3.0 * context.beam.major / step).ceil() as usize;
-    let half = 0.5 * point.brightness;
-    let crossing = |sign: f64| -> Option<f64> {
-        let across = SkyOffset::polar(sign, direction_deg + 90.0);
+    let beside = |aside: f64| {
+        let across = SkyOffset::polar(aside, direction_deg + 90.0);
+        window.cubic(context.frame.pixel(point.offset.plus(across)))
+    };
+    let crossing = |sign: f64, half: f64| -> Option<f64> {
         let mut previous = point.brightness;
         for k in 1..=reach {
             let distance = k as f64 * step;
-            let value =
-                window.cubic(context.frame.pixel(point.offset.plus(across.times(distance))))?;
+            let value = beside(sign * distance)?;
             if value <= half {
                 return Some(
                     distance - step * (half - value) / (previous - value).max(f64::MIN_POSITIVE),
@@ -630,11 +651,17 @@ fn transverse_width(
         }
         None
     };
-    let (Some(left), Some(right)) = (crossing(-1.0), crossing(1.0)) else {
-        return (missing, missing);
+    let between = |base: f64| {
+        let half = 0.5 * (point.brightness + base);
+        Some(crossing(-1.0, half)? + crossing(1.0, half)?)
     };
-    let width = left + right;
-    let sigma = 1.02 * width / signal;
+    let Some(raw) = between(0.0) else { return (missing, missing) };
+    // Diffuse emission under the ridge, as bright as beside it: above the noise on both sides.
+    let base = beside(-1.5 * raw).zip(beside(1.5 * raw)).map_or(0.0, |(a, b)| a.min(b));
+    let base = if base > 2.0 * point.rms { base } else { 0.0 };
+    let width = between(base).unwrap_or(raw);
+    let noise = 1.02 * width / signal * point.brightness / (point.brightness - base);
+    let sigma = noise.hypot(0.5 * (raw - width));
     let beam_width = context.beam.projected_fwhm(direction_deg);
     let square = width * width - beam_width * beam_width;
     let square_sigma = 2.0 * width * sigma;

@@ -83,17 +83,13 @@ pub(super) fn side_record(
         bend_deg: bend,
         length_arcsec: units.arcsec(size),
         length_px: units.px(size),
-        ridge_length_arcsec: if ridge.points.is_empty() {
-            Measurement::missing(Because::JetNotDetected)
-        } else {
-            let length = ridge.length(beam.mean_fwhm());
-            let along = ridge.end.map_or((0.0, 0.0), |end| (end.along.minus, end.along.plus));
-            units.arcsec(cut(Measurement::value(
-                length,
-                along.0.hypot(core_sigma),
-                along.1.hypot(core_sigma),
-            )))
-        },
+        ridge_length_arcsec: ridge.length(beam.mean_fwhm(), settings.outline_sigma).map_or(
+            Measurement::missing(Because::JetNotDetected),
+            |(length, minus, plus)| {
+                let (minus, plus) = (minus.hypot(core_sigma), plus.hypot(core_sigma));
+                units.arcsec(cut(Measurement::value(length, minus, plus)))
+            },
+        ),
         length_kpc: Measurement::missing(Because::NoRedshift),
         flux_density_mjy: flux,
         fr_ratio: fr,

@@ -53,30 +53,31 @@ pub struct SideFeatures {
 /// A hot spot is at least this bright against the side's brightest peak: knots may outshine
 /// it, but a speck at the end of a fading jet is none.
 const HOTSPOT_BRIGHTNESS: f64 = 0.25;
-/// 1.5 beams from a hot spot the brightness has fallen below this share of its: the median all
-/// around (what is wider than about two beams is a lobe's or plume's maximum), and the highest
-/// outwards (a jet or plume that goes on is brighter). Hot spots exceed their surroundings four
-/// times and lie at the end of the jet (two criteria of Bridle et al. 1994, AJ 108, 766, from
-/// memory; their third, a twentieth of the source's size, is not resolved by most maps).
-const HOTSPOT_SURROUNDINGS: f64 = 0.25;
-/// Many lobes have no compact spot on the maps we get. Their head counts as the hot spot where
-/// it is the brightest of its side to this share, where this share of its brightness is left
-/// 1.5 beams around it (a bump in a jet is narrower), where it has fallen to 0.6 two beams outwards,
-/// and where the way from the core is three times fainter somewhere: the side is
-/// edge-brightened (own choice on real survey maps).
-const LOBE_BRIGHTNESS: f64 = 0.75;
-const LOBE_WIDTH: f64 = 0.2;
-const LOBE_BEAMS: f64 = 2.0;
-const LOBE_FALL: f64 = 0.6;
-const LOBE_CONTRAST: f64 = 1.0 / 3.0;
-/// A fit counts fully where half as much again as this share of the brightness is shaped as the
-/// beam, and not at all below it.
-const LEAST_COMPONENT: f64 = 0.35;
-/// Where surroundings are compared, in beams from the spot; at how many places; and how far
-/// from the direction away from the core a place counts as outward.
-const SURROUNDINGS_BEAMS: f64 = 1.5;
+/// At this many beams from a hot spot the brightness has fallen to this share of its, either
+/// of the two pairs: the median all around (what is wider than about two beams is a lobe's or
+/// plume's maximum), and the highest outwards (a jet or plume that goes on is brighter). Hot
+/// spots exceed their surroundings four times and lie at the end of the jet (two criteria of
+/// Bridle et al. 1994, AJ 108, 766, from memory; their third, a twentieth of the source's size,
+/// is not resolved by most maps).
+const HOTSPOT_FALL: [(f64, f64); 2] = [(1.5, 0.25), (2.0, 0.15)];
+/// At how many places surroundings are compared, and how far from the direction away from the
+/// core a place counts as outward.
 const SURROUNDINGS_PLACES: u32 = 24;
 const SURROUNDINGS_DEG: f64 = 60.0;
+/// Many lobes have no compact spot on the maps we get. Their head counts as the hot spot where
+/// it is the brightest of its side to this share, lies beyond this share of the side, has the
+/// way from the core three times fainter somewhere (the side is edge-brightened), is so wide
+/// that at 1.5 beams a fifth is left around it (a bump in a jet is narrower), and has fallen to
+/// half two beams outwards (own choice on real survey maps and made plumes).
+const LOBE_BRIGHTNESS: f64 = 0.75;
+const LOBE_PLACE: f64 = 0.6;
+const LOBE_CONTRAST: f64 = 1.0 / 3.0;
+const LOBE_WIDTH: (f64, f64) = (1.5, 0.2);
+const LOBE_FALL: (f64, f64) = (2.0, 0.5);
+/// A fit counts fully where this share of the brightness is shaped as the beam, and not at all
+/// below the other.
+const FULL_COMPONENT: f64 = 0.6;
+const LEAST_COMPONENT: f64 = 0.4;
 /// Peaks nearer to a detected core than this many beams are its own.
 const CORE_BEAMS: f64 = 0.6;
 /// Hot spots are looked for beyond this many beams.
@@ -155,7 +156,8 @@ pub fn find_features(input: &FeatureInput) -> [SideFeatures; 2] {
 }
 
 /// The outermost peak that is compact, ends the jet and is not faint against the side's
-/// brightest. `peaks` from the farthest inwards.
+/// brightest; where there is none, the outermost head of a lobe. `peaks` from the farthest
+/// inwards.
 ///
 /// Of a double of doubles this is the inner pair, as long as the outer lobes hold no hot spot
 /// of their own any more.
@@ -163,41 +165,41 @@ fn hotspot(input: &FeatureInput, ridge: &Ridge, peaks: &[(Peak, SkyOffset)]) -> 
     let beyond = HOTSPOT_BEYOND_BEAMS * input.beam.major;
     let outer = || peaks.iter().filter(|p| p.1.radius() > beyond);
     let highest = outer().map(|p| p.0.value).fold(0.0, f64::max);
-    outer().find_map(|&(peak, offset)| {
-        let outward_deg = offset.position_angle_deg();
-        let share = peak.value / highest;
-        let near = Surroundings::of(input, &peak, outward_deg, SURROUNDINGS_BEAMS);
-        if !(share >= HOTSPOT_BRIGHTNESS && near.is_compact_end()
-            || share >= LOBE_BRIGHTNESS && is_lobe(input, ridge, &peak, offset, &near))
-        {
-            return None;
+    let of_brightness = |least: f64| outer().filter(move |p| p.0.value >= least * highest);
+    let (peak, offset) = of_brightness(HOTSPOT_BRIGHTNESS)
+        .find(|p| is_compact_end(input, &p.0, p.1))
+        .or_else(|| of_brightness(LOBE_BRIGHTNESS).find(|p| is_lobe(input, ridge, &p.0, p.1)))?;
+    Some(placed(input, peak, *offset))
+}
+
+/// A hot spot at a local maximum, freed from the pull of what it stands in.
+fn placed(input: &FeatureInput, peak: &Peak, offset: SkyOffset) -> Feature {
+    let FeatureInput { window, beam, frame, noise, .. } = *input;
+    let outward_deg = offset.position_angle_deg();
+    let fit = fit_spot(window, peak.pixel, outward_deg + 180.0, beam, frame, noise);
+    let (pixel, value, covariance, brightness_sigma) = match fit {
+        Some(spot) => {
+            // A maximum too broad for a beam-shaped component is where it seems to be.
+            let share = spot.component / spot.brightness;
+            let trust = ((share - LEAST_COMPONENT) / (FULL_COMPONENT - LEAST_COMPONENT)).clamp(0.0, 1.0);
+            let shift = frame.difference(peak.pixel, spot.pixel);
+            let mut covariance = spot.covariance;
+            widen(&mut covariance, shift, 1.0 - trust);
+            let value = peak.value + trust * (spot.brightness - peak.value);
+            let pixel = frame.moved(peak.pixel, shift.times(trust));
+            (pixel, value, covariance, spot.brightness_sigma)
         }
-        let FeatureInput { window, beam, frame, noise, .. } = *input;
-        let fit = fit_spot(window, peak.pixel, outward_deg + 180.0, beam, frame, noise);
-        let (pixel, value, covariance, brightness_sigma) = match fit {
-            Some(spot) => {
-                // A maximum too broad for a beam-shaped component is where it seems to be.
-                let share = spot.component / spot.brightness;
-                let trust = ((share - LEAST_COMPONENT) / LEAST_COMPONENT).clamp(0.0, 0.5) * 2.0;
-                let shift = frame.difference(peak.pixel, spot.pixel);
-                let mut covariance = spot.covariance;
-                widen(&mut covariance, shift, 1.0 - trust);
-                let value = peak.value + trust * (spot.brightness - peak.value);
-                let pixel = frame.moved(peak.pixel, shift.times(trust));
-                (pixel, value, covariance, spot.brightness_sigma)
-            }
-            None => {
-                let rms = peak.value / peak.signal_to_noise.max(1.0);
-                (peak.pixel, peak.value, maximum_covariance(input, &peak, outward_deg), rms)
-            }
-        };
-        Some(Feature {
-            peak: Peak { pixel, value, ..peak },
-            offset: frame.offset(pixel),
-            covariance,
-            brightness_sigma,
-        })
-    })
+        None => {
+            let rms = peak.value / peak.signal_to_noise.max(1.0);
+            (peak.pixel, peak.value, maximum_covariance(input, peak, outward_deg), rms)
+        }
+    };
+    Feature {
+        peak: Peak { pixel, value, ..*peak },
+        offset: frame.offset(pixel),
+        covariance,
+        brightness_sigma,
+    }
 }
 
 /// What a peak stands in, over its own brightness.
@@ -232,27 +234,32 @@ impl Surroundings {
         }
     }
 
-    /// Two rms are allowed for the highest of the few places looked at.
-    fn is_compact_end(&self) -> bool {
-        self.outward - 2.0 * self.rms <= HOTSPOT_SURROUNDINGS && self.around <= HOTSPOT_SURROUNDINGS
+    /// Whether both have fallen to a share; two rms are allowed for the highest of the few
+    /// places looked at.
+    fn fallen_to(&self, share: f64) -> bool {
+        self.outward - 2.0 * self.rms <= share && self.around <= share
     }
 }
 
-/// Whether a peak is the head of a lobe: wider than a jet, falling off beyond it, and far
-/// brighter than the faintest place of the ridge on its way from the core.
-fn is_lobe(
-    input: &FeatureInput,
-    ridge: &Ridge,
-    peak: &Peak,
-    offset: SkyOffset,
-    near: &Surroundings,
-) -> bool {
-    let way = |p: &&RidgePoint| p.distance > input.beam.major && p.distance < offset.radius();
+/// Whether a peak is compact and nothing as bright goes on beyond it.
+fn is_compact_end(input: &FeatureInput, peak: &Peak, offset: SkyOffset) -> bool {
+    HOTSPOT_FALL.iter().any(|&(beams, share)| {
+        Surroundings::of(input, peak, offset.position_angle_deg(), beams).fallen_to(share)
+    })
+}
+
+/// Whether a peak is the head of a lobe: wider than a jet, falling off beyond it, in the outer
+/// part of its side, and far brighter than the faintest place of the ridge on its way from the
+/// core.
+fn is_lobe(input: &FeatureInput, ridge: &Ridge, peak: &Peak, offset: SkyOffset) -> bool {
+    let (distance, outward_deg) = (offset.radius(), offset.position_angle_deg());
+    let length = ridge.points.last().map_or(0.0, |p| p.distance);
+    let way = |p: &&RidgePoint| p.distance > input.beam.major && p.distance < distance;
     let faintest = ridge.points.iter().filter(way).map(|p| p.brightness).fold(peak.value, f64::min);
-    near.around >= LOBE_WIDTH
+    distance > LOBE_PLACE * length
         && faintest <= LOBE_CONTRAST * peak.value
-        && Surroundings::of(input, peak, offset.position_angle_deg(), LOBE_BEAMS).outward
-            <= LOBE_FALL
+        && Surroundings::of(input, peak, outward_deg, LOBE_WIDTH.0).around >= LOBE_WIDTH.1
+        && Surroundings::of(input, peak, outward_deg, LOBE_FALL.0).outward <= LOBE_FALL.1
 }
 
 /// Covariance of a local maximum's place from noise alone.

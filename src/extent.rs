@@ -1,9 +1,11 @@
 //! Sizes on the sky: largest extent, length of each side, width across, and what the beam
 //! adds to them.
 
+use crate::edge::{OutlinePoint, Wander, wander_of_outline};
 use crate::map::beam::Beam;
 use crate::map::geometry::LocalFrame;
 use crate::measurement::Measurement;
+use crate::stats::normal_deviate;
 use crate::units::{Pixel, SkyOffset};
 use crate::window::Window;
 
@@ -15,19 +17,36 @@ pub struct End {
     /// Half the distance by which the beam alone carries the contour beyond an unresolved
     /// feature as bright as the one nearest to this end.
     pub reach: f64,
-    /// 1σ by which noise moves the contour along the extent.
-    pub sigma: f64,
+    /// How noise moves the contour's outermost point there.
+    pub wander: Wander,
 }
 
 /// An extent between two ends of a contour.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Extent {
-    /// Distance between the ends, sky units.
-    pub length: f64,
+    /// Distance between the ends as the contour has them, sky units.
+    pub raw_length: f64,
     /// Directed position angle from the first to the second end.
     pub direction_deg: f64,
     /// The ends.
     pub ends: [End; 2],
+}
+
+/// What an extent is measured on.
+#[derive(Clone, Copy)]
+pub struct Outline<'a> {
+    /// The map around the source.
+    pub window: &'a Window,
+    /// Any local frame of it.
+    pub frame: &'a LocalFrame,
+    /// The beam.
+    pub beam: &'a Beam,
+    /// Level of the contour, map unit.
+    pub level: f64,
+    /// Points of the contour.
+    pub contour: &'a [Pixel],
+    /// The source's local maxima with their brightness.
+    pub peaks: &'a [(Pixel, f64)],
 }
 
 /// Distance from an unresolved feature of brightness `peak` to the contour at `level`, for a
@@ -50,67 +69,184 @@ pub fn position_sigma(beam_fwhm: f64, signal_to_noise: f64) -> f64 {
     0.60 * beam_fwhm / signal_to_noise.max(1.0)
 }
 
-/// 1σ per axis of a peak's position in extended emission: noise, and a twentieth of the beam
-/// for the slope it stands on, which moves a maximum whatever its S/N (a floor of up to a
-/// tenth of the beam is common practice).
-pub fn feature_sigma(beam_fwhm: f64, signal_to_noise: f64) -> f64 {
-    position_sigma(beam_fwhm, signal_to_noise).hypot(0.05 * beam_fwhm)
+/// 1σ of a local maximum's place along a direction: where the noise's gradient (1.67 rms over
+/// the beam's FWHM, for noise smoothed by the beam) cancels that of the brightness, which grows
+/// with distance as the curvature seen on the map. At most a beam.
+pub fn maximum_sigma(
+    window: &Window,
+    frame: &LocalFrame,
+    beam: &Beam,
+    pixel: Pixel,
+    pa_deg: f64,
+) -> f64 {
+    let width = beam.reach_along(pa_deg);
+    let step = SkyOffset::polar(0.4 * width, pa_deg);
+    let at = |factor: f64| window.bilinear(frame.moved(pixel, step.times(factor)));
+    let (Some(before), Some(top), Some(after)) = (at(-1.0), at(0.0), at(1.0)) else {
+        return beam.major;
+    };
+    let rms = window.rms_at(pixel).unwrap_or(0.0);
+    let curvature = (2.0 * top - before - after).max(f64::MIN_POSITIVE) / step.dot(step);
+    let gradient = (4.0 * std::f64::consts::LN_2).sqrt() * rms / width;
+    (gradient / curvature).min(beam.major)
 }
 
-/// An end is the farthest of all points of a noisy contour: it scatters this many times more
-/// than a point fixed beforehand (measured on made maps of doubles: 1.7 to 1.8).
-pub const FARTHEST_POINT: f64 = 1.75;
+/// Points of the contour farther than this many beams from an end do not become the end.
+const NEAR_BEAMS: f64 = 3.0;
 
-impl Extent {
-    /// Measures an extent between two contour points.
-    ///
-    /// `peaks` are the source's local maxima with their brightness; the one nearest to an end
-    /// gives the beam's reach there. The error of an end is rms over the brightness gradient
-    /// along the extent.
-    pub fn between(
-        window: &Window,
-        frame: &LocalFrame,
-        beam: &Beam,
-        level: f64,
-        peaks: &[(Pixel, f64)],
-        points: [Pixel; 2],
-    ) -> Self {
-        let chord = frame.difference(points[0], points[1]);
-        let direction_deg = chord.position_angle_deg();
-        let fwhm = beam.reach_along(direction_deg);
-        let end = |pixel: Pixel, outward_deg: f64| {
-            let peak = peaks
-                .iter()
-                .min_by(|a, b| {
-                    frame.separation(a.0, pixel).total_cmp(&frame.separation(b.0, pixel))
-                })
-                .map_or(level, |p| p.1);
-            let step = SkyOffset::polar(0.25 * beam.minor, outward_deg);
-            let sample = |sign: f64| window.bilinear(frame.moved(pixel, step.times(sign)));
-            let slope = match (sample(-1.0), sample(1.0)) {
-                (Some(inside), Some(outside)) => (inside - outside) / (2.0 * step.radius()),
-                _ => 0.0,
-            };
-            let rms = window.rms_at(pixel).unwrap_or(0.0);
-            // No steeper than noise allows to tell: a flat edge is unsure by up to a beam.
-            let sigma = (rms / slope.max(f64::MIN_POSITIVE)).min(beam.major);
-            End { pixel, reach: beam_reach(peak, level, fwhm), sigma }
-        };
-        let ends = [end(points[0], direction_deg + 180.0), end(points[1], direction_deg)];
-        Self { length: chord.radius(), direction_deg, ends }
+impl Outline<'_> {
+    /// The extent between two points of the contour, whose distance is the largest.
+    pub fn between(&self, points: [Pixel; 2]) -> Extent {
+        let chord = self.frame.difference(points[0], points[1]);
+        let (length, pa_deg) = (chord.radius(), chord.position_angle_deg());
+        self.extent(points, length, pa_deg, |k, p| self.frame.separation(points[1 - k], p) - length)
     }
 
-    /// 1σ of the length.
-    pub fn sigma(&self) -> f64 {
-        FARTHEST_POINT * self.ends[0].sigma.hypot(self.ends[1].sigma)
+    /// The extent along a direction between the two points that lie farthest out in it.
+    pub fn along(&self, points: [Pixel; 2], pa_deg: f64) -> Extent {
+        let unit = SkyOffset::polar(1.0, pa_deg);
+        let chord = self.frame.difference(points[0], points[1]).dot(unit);
+        let unit = unit.times(if chord < 0.0 { -1.0 } else { 1.0 });
+        let outward = [unit.times(-1.0), unit];
+        self.extent(points, chord.abs(), unit.position_angle_deg(), |k, p| {
+            self.frame.difference(points[k], p).dot(outward[k])
+        })
+    }
+
+    /// `behind`: how far out a point lies against end k.
+    fn extent(
+        &self,
+        points: [Pixel; 2],
+        raw_length: f64,
+        direction_deg: f64,
+        behind: impl Fn(usize, Pixel) -> f64,
+    ) -> Extent {
+        let fwhm = self.beam.reach_along(direction_deg);
+        let ends = [0, 1].map(|k| {
+            let pixel = points[k];
+            let peak = self
+                .peaks
+                .iter()
+                .min_by(|a, b| {
+                    let distance = |p: &Pixel| self.frame.separation(*p, pixel);
+                    distance(&a.0).total_cmp(&distance(&b.0))
+                })
+                .map_or(self.level, |p| p.1);
+            let outward_deg = direction_deg + if k == 0 { 180.0 } else { 0.0 };
+            let wander = self.wander(pixel, outward_deg, |p| behind(k, p));
+            End { pixel, reach: beam_reach(peak, self.level, fwhm), wander }
+        });
+        Extent { raw_length, direction_deg, ends }
+    }
+
+    /// How noise moves the outermost point of the contour near one of its points.
+    fn wander(&self, end: Pixel, outward_deg: f64, behind: impl Fn(Pixel) -> f64) -> Wander {
+        let unit = SkyOffset::polar(1.0, outward_deg);
+        let across = SkyOffset::polar(1.0, outward_deg + 90.0);
+        let width = self.beam.projected_fwhm(outward_deg);
+        let near = NEAR_BEAMS * width.max(self.beam.minor);
+        let rms = self.window.rms_at(end).unwrap_or(0.0);
+        let points: Vec<OutlinePoint> = self
+            .contour
+            .iter()
+            .filter_map(|&p| {
+                let offset = self.frame.difference(end, p);
+                let aside = offset.dot(across);
+                if aside.abs() > near || offset.dot(unit).abs() > near {
+                    return None;
+                }
+                let (slope, change) = self.fading(p, unit)?;
+                let reach = behind(p).min(0.0);
+                Some(OutlinePoint { reach, aside: aside / width, slope, change })
+            })
+            .collect();
+        wander_of_outline(&points, rms / self.level.max(f64::MIN_POSITIVE))
+    }
+
+    /// How the brightness falls outwards at a point of the contour: slope of its logarithm
+    /// and half its change, from the distances inwards at which it has doubled and doubled
+    /// again: far enough that noise does not make the slope. `None` where it does not fall.
+    fn fading(&self, at: Pixel, unit: SkyOffset) -> Option<(f64, f64)> {
+        let beam = self.beam.minor;
+        let inside = |direction: SkyOffset, distance: f64| {
+            self.window.bilinear(self.frame.moved(at, direction.times(-distance)))
+        };
+        let drop = |direction: SkyOffset| {
+            Some(inside(direction, 0.5 * beam)? - inside(direction, -0.5 * beam)?)
+        };
+        let (outward, aside) =
+            (drop(unit)?, drop(SkyOffset::new(-unit.north, unit.east)).unwrap_or(0.0));
+        if outward <= 0.0 {
+            return None;
+        }
+        // The contour moves along its normal; only the share along the extent counts.
+        let cosine = outward / outward.hypot(aside);
+        let normal = SkyOffset::new(
+            unit.east * outward - unit.north * aside,
+            unit.north * outward + unit.east * aside,
+        );
+        let normal = normal.times(1.0 / normal.radius());
+        let step = 0.125 * beam;
+        let (mut doubled, mut highest) = ([None; 2], (self.level, 0.0));
+        let mut before = self.level;
+        for k in 1..=MOST_STEPS {
+            let distance = f64::from(k) * step;
+            let Some(value) = inside(normal, distance) else { break };
+            for (found, factor) in doubled.iter_mut().zip([2.0, 4.0]) {
+                let wanted = factor * self.level;
+                if found.is_none() && value >= wanted {
+                    let back = step * (value - wanted) / (value - before).max(f64::MIN_POSITIVE);
+                    *found = Some(distance - back.min(step));
+                }
+            }
+            if value > highest.0 {
+                highest = (value, distance);
+            }
+            before = value;
+            if doubled[1].is_some() {
+                break;
+            }
+        }
+        let two = std::f64::consts::LN_2;
+        let least = 0.5 / self.beam.major;
+        let (slope, change) = match doubled {
+            [Some(d), Some(e)] if e > d => {
+                let slope = two * (e * e - 2.0 * d * d) / (d * e * (e - d));
+                let change = (slope * d - two) / (d * d);
+                // A profile that flattens outwards counts as straight.
+                if change > 0.0 { (slope, change) } else { (two / d, 0.0) }
+            }
+            [Some(d), _] => (two / d, 0.0),
+            _ if highest.1 > 0.0 => ((highest.0 / self.level).ln() / highest.1, 0.0),
+            _ => (least, 0.0),
+        };
+        Some((slope.max(least) / cosine, change / (cosine * cosine)))
+    }
+}
+
+/// Steps of an eighth of a beam inwards over which the brightness is looked at: four beams.
+const MOST_STEPS: u32 = 32;
+
+impl Extent {
+    /// The length without what noise has carried its ends out.
+    pub fn length(&self) -> f64 {
+        (self.raw_length - self.ends[0].wander.bias - self.ends[1].wander.bias).max(0.0)
+    }
+
+    /// 1σ of the length downwards and upwards.
+    pub fn sigma(&self) -> (f64, f64) {
+        let [a, b] = self.ends.map(|end| end.wander);
+        (a.minus.hypot(b.minus), a.plus.hypot(b.plus))
     }
 
     /// The length with its error; a lower limit where the contour is cut off.
     pub fn size(&self, cut_off: bool, confidence: f64) -> Measurement {
         if cut_off {
-            Measurement::lower_limit(self.length, confidence)
+            let least = self.length() - normal_deviate(confidence) * self.sigma().0;
+            Measurement::lower_limit(least, confidence)
         } else {
-            Measurement::symmetric(self.length, self.sigma())
+            let (minus, plus) = self.sigma();
+            Measurement::value(self.length(), minus, plus)
         }
     }
 
@@ -123,16 +259,15 @@ impl Extent {
         confidence: f64,
         z: f64,
     ) -> Measurement {
-        let value = self.length - self.ends[0].reach - self.ends[1].reach;
-        let sigma = self.sigma();
+        let value = self.length() - self.ends[0].reach - self.ends[1].reach;
+        let (minus, plus) = self.sigma();
         if cut_off {
-            return Measurement::lower_limit(value.max(0.0), confidence);
+            return Measurement::lower_limit((value - z * minus).max(0.0), confidence);
         }
-        // The longest chord of a noisy contour is biased outwards: two errors are not enough.
-        if value > resolution.max(3.0 * sigma) {
-            Measurement::symmetric(value, sigma)
+        if value > resolution.max(3.0 * minus) {
+            Measurement::value(value, minus, plus)
         } else {
-            Measurement::upper_limit((value.max(0.0) + z * sigma).max(resolution), confidence)
+            Measurement::upper_limit((value.max(0.0) + z * plus).max(resolution), confidence)
         }
     }
 }

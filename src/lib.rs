@@ -29,6 +29,7 @@ pub mod cli;
 pub mod components;
 pub mod constants;
 pub mod contour;
+pub mod edge;
 pub mod extent;
 pub mod flags;
 pub mod flux;

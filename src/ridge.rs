@@ -7,10 +7,12 @@
 //! transverse profile. "Bearing of the ridge at d" is the direction from the core to the
 //! ridge's point at radial distance d.
 
+use crate::constants::FWHM_PER_SIGMA;
+use crate::edge::{ProfilePoint, Wander, last_above};
 use crate::map::beam::Beam;
 use crate::map::geometry::LocalFrame;
 use crate::measurement::{Because, Measurement};
-use crate::stats::normal_probability;
+use crate::stats::{median, normal_deviate, normal_probability};
 use crate::units::{SkyOffset, wrap_difference_deg, wrap_directed_deg};
 use crate::window::Window;
 
@@ -31,9 +33,20 @@ pub struct RidgePoint {
     pub width: Measurement,
     /// The same with the beam's projected width taken off.
     pub width_deconvolved: Measurement,
+    /// The beam's projected width there.
+    pub beam_width: f64,
 }
 
 impl RidgePoint {
+    /// 1σ of its place across the ridge: 0.30 W²/b over the signal-to-noise, where the noise's
+    /// gradient cancels that of a Gaussian profile of FWHM W (the beam's b where W is not
+    /// known); no more than such a profile's own standard deviation.
+    pub fn aside_sigma(&self) -> f64 {
+        let width = self.width.best().unwrap_or(self.beam_width).max(self.beam_width);
+        let sigma = 0.30 * width * width / (self.beam_width * self.signal_to_noise().max(1.0));
+        sigma.min(width / FWHM_PER_SIGMA)
+    }
+
     /// Brightness over local rms.
     pub fn signal_to_noise(&self) -> f64 {
         self.brightness / self.rms.max(f64::MIN_POSITIVE)
@@ -49,6 +62,30 @@ pub struct Ridge {
     pub detected: bool,
     /// Points at growing distance, up to the last one above the outline threshold.
     pub points: Vec<RidgePoint>,
+    /// Where it ends.
+    pub end: Option<RidgeEnd>,
+}
+
+/// The end of a ridge: where it last stands at the outline threshold, freed from what noise
+/// has added to it.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct RidgeEnd {
+    /// Offset from the core.
+    pub offset: SkyOffset,
+    /// How noise moves it along the ridge.
+    pub along: Wander,
+    /// 1σ across the ridge, sky units.
+    pub across: f64,
+    /// Change of the bearing with distance there, degrees per sky unit.
+    pub turn_deg: f64,
+}
+
+impl RidgeEnd {
+    /// 1σ of the bearing from the core, degrees.
+    pub fn bearing_sigma_deg(&self) -> f64 {
+        let aside = (self.across / self.offset.radius().max(f64::MIN_POSITIVE)).to_degrees();
+        aside.hypot(self.turn_deg * self.along.sigma())
+    }
 }
 
 impl Ridge {
@@ -99,15 +136,115 @@ impl Ridge {
         self
     }
 
-    /// Length along the ridge from the core to its last point.
-    pub fn length(&self) -> f64 {
+    /// Length along the ridge from the core to its end with its 1σ downwards and upwards; the
+    /// core's own error is not counted. `beam` is the beam's mean width.
+    ///
+    /// Chords of a beam's length join the points that stand above the threshold, straight over
+    /// gaps between them. Noise that moves points aside lengthens each chord c by s²/c on the
+    /// mean (s: 1σ of a point across the ridge), which is taken off. How sure the path is
+    /// follows from chords three times as long: a path that winds within a few beams is told
+    /// from one that wanders with noise or between several crests only as well as the two agree.
+    pub fn length(&self, beam: f64, threshold: f64) -> Option<(f64, f64, f64)> {
+        let end = self.end.as_ref()?;
+        let (fine, noise) = self.chords(end.offset, beam, threshold);
+        let (coarse, _) = self.chords(end.offset, 3.0 * beam, threshold);
+        let path = noise.hypot(0.5 * (fine - noise - coarse));
+        let length = (fine - noise).max(end.offset.radius());
+        Some((length, end.along.minus.hypot(path), end.along.plus.hypot(path)))
+    }
+
+    /// Sum of chords of at least a length, and what noise adds to it on the mean.
+    fn chords(&self, end: SkyOffset, least: f64, threshold: f64) -> (f64, f64) {
         let mut previous = SkyOffset::default();
-        let mut sum = 0.0;
-        for point in &self.points {
-            sum += point.offset.minus(previous).radius();
-            previous = point.offset;
+        let (mut sum, mut noise) = (0.0, 0.0);
+        let inside = end.radius() - least;
+        let bright = |p: &&RidgePoint| p.signal_to_noise() >= threshold;
+        for point in self.points.iter().filter(bright).filter(|p| p.distance < inside) {
+            let step = point.offset.minus(previous).radius();
+            if step >= least {
+                sum += step;
+                noise += point.aside_sigma().powi(2) / step;
+                previous = point.offset;
+            }
         }
-        sum
+        (sum + end.minus(previous).radius(), noise)
+    }
+}
+
+/// Fewest points from which an opening angle or an exponent is taken.
+const LEAST_WIDTHS: usize = 3;
+/// Error of a width beside the noise, as a share of the beam's: interpolation between pixels
+/// and the beam as described.
+const WIDTH_SHARE: f64 = 0.01;
+/// An exponent needs points whose distances differ by this factor.
+const LEAST_SPAN: f64 = 1.5;
+
+impl Ridge {
+    fn between(&self, (inner, outer): (f64, f64)) -> impl Iterator<Item = &RidgePoint> {
+        self.points.iter().filter(move |p| p.distance >= inner && p.distance < outer)
+    }
+
+    /// Full opening angle 2 atan(½ w/d), w the width with the beam taken off and d the distance
+    /// from the core: that of the median of w²/d² over the points between two distances. A point
+    /// that noise makes narrower than the beam counts with its negative square, so that the
+    /// median of unresolved points has no bias. An upper limit where it is not 2σ above zero.
+    pub fn opening_angle_deg(
+        &self,
+        ends: (f64, f64),
+        beam_major: f64,
+        confidence: f64,
+    ) -> Measurement {
+        let mut squares = Vec::new();
+        let (mut variance, mut share) = (0.0, 0.0);
+        for point in self.between(ends) {
+            let Measurement::Value { value: width, minus, .. } = point.width else { continue };
+            let area = point.distance * point.distance;
+            squares.push((width * width - point.beam_width * point.beam_width) / area);
+            variance += (2.0 * width * minus / area).powi(2);
+            share += 2.0 * WIDTH_SHARE * point.beam_width * point.beam_width / area;
+        }
+        let count = squares.len() as f64;
+        let Some(square) = median(&mut squares).filter(|_| squares.len() >= LEAST_WIDTHS) else {
+            return Measurement::missing(Because::Unresolved);
+        };
+        // Points within a beam share their noise; a median scatters 1.25 times more than a mean.
+        let beams = ((ends.1 - ends.0) / beam_major).clamp(1.0, count);
+        let sigma = (1.25 * (variance / count / beams).sqrt()).hypot(share / count);
+        let angle = |square: f64| 2.0 * (0.5 * square.max(0.0).sqrt()).atan().to_degrees();
+        if square >= 2.0 * sigma {
+            Measurement::symmetric(square, sigma)
+                .with_ci95(square - 1.96 * sigma, square + 1.96 * sigma)
+                .increasing(angle)
+        } else {
+            let z = normal_deviate(confidence);
+            Measurement::upper_limit(angle(square.max(0.0) + z * sigma), confidence)
+        }
+    }
+
+    /// Exponent k of width ∝ distance^k: slope of ln(deconvolved width) against ln(distance),
+    /// weighted by the widths' errors, over resolved points between two distances. `None` with
+    /// too few of them or too short a span.
+    pub fn width_exponent(&self, ends: (f64, f64)) -> Option<f64> {
+        let points: Vec<(f64, f64, f64)> = self
+            .between(ends)
+            .filter_map(|p| match p.width_deconvolved {
+                Measurement::Value { value, minus, .. } if value > 0.0 && minus > 0.0 => {
+                    Some((p.distance.ln(), value.ln(), (value / minus).powi(2)))
+                }
+                _ => None,
+            })
+            .collect();
+        let (first, last) = (points.first()?.0, points.last()?.0);
+        if points.len() < 2 * LEAST_WIDTHS || last - first < LEAST_SPAN.ln() {
+            return None;
+        }
+        let total: f64 = points.iter().map(|p| p.2).sum();
+        let mean =
+            |f: fn(&(f64, f64, f64)) -> f64| points.iter().map(|p| p.2 * f(p)).sum::<f64>() / total;
+        let (x, y) = (mean(|p| p.0), mean(|p| p.1));
+        let product: f64 = points.iter().map(|p| p.2 * (p.0 - x) * (p.1 - y)).sum();
+        let square: f64 = points.iter().map(|p| p.2 * (p.0 - x).powi(2)).sum();
+        (square > 0.0).then(|| product / square)
     }
 }
 
@@ -157,11 +294,11 @@ pub fn trace_ridges(window: &Window, context: &RidgeContext) -> [Ridge; 2] {
     let polar = sample_polar(window, context);
     let starts = starting_directions(&polar, context);
     let mut ridges =
-        starts.map(|start_deg| Ridge { start_deg, detected: false, points: Vec::new() });
+        starts.map(|start_deg| Ridge { start_deg, detected: false, points: Vec::new(), end: None });
     for side in 0..2 {
         let (own, other) = (starts[side], starts[1 - side]);
         let path = best_path(&polar, own, other);
-        ridges[side].points = crest_points(window, context, &polar, &path);
+        (ridges[side].points, ridges[side].end) = crest_points(window, context, &polar, &path);
         ridges[side].detected =
             ridges[side].points.last().is_some_and(|p| p.distance > context.beam.major);
     }
@@ -169,6 +306,7 @@ pub fn trace_ridges(window: &Window, context: &RidgeContext) -> [Ridge; 2] {
     for side in 0..2 {
         if !ridges[side].detected && ridges[1 - side].detected {
             ridges[side].points.clear();
+            ridges[side].end = None;
             ridges[side].start_deg = wrap_directed_deg(starts[1 - side] + 180.0);
         }
     }
@@ -184,7 +322,8 @@ fn sample_polar(window: &Window, context: &RidgeContext) -> Polar {
         }
     }
     let first = 0.5 * beam.minor;
-    let farthest = farthest + 0.5 * beam.major;
+    // Somewhat farther: how the brightness fades beyond its end tells how sure the end is.
+    let farthest = farthest + 1.5 * beam.major;
     let fine = (beam.minor / 3.0).max(0.5 * context.frame.mean_scale());
     let circles = (((farthest - first) / fine).ceil().max(1.0) as usize).min(MOST_CIRCLES);
     let step = ((farthest - first) / circles as f64).max(f64::MIN_POSITIVE);
@@ -338,7 +477,7 @@ fn crest_points(
     context: &RidgeContext,
     polar: &Polar,
     path: &[usize],
-) -> Vec<RidgePoint> {
+) -> (Vec<RidgePoint>, Option<RidgeEnd>) {
     let beam = context.beam;
     let on_circle = |distance: f64, bearing: f64| {
         window.cubic(context.frame.pixel(SkyOffset::polar(distance, bearing)))
@@ -389,16 +528,74 @@ fn crest_points(
             rms,
             width: Measurement::missing(Because::Unresolved),
             width_deconvolved: Measurement::missing(Because::Unresolved),
+            beam_width: beam.mean_fwhm(),
         });
     }
+    let profile = points.clone();
     points.truncate(last);
     for k in 0..points.len() {
         let direction = local_direction(&points, k);
         let (width, deconvolved) = transverse_width(window, context, &points[k], direction);
         points[k].width = width;
         points[k].width_deconvolved = deconvolved;
+        points[k].beam_width = context.beam.projected_fwhm(direction);
     }
-    points
+    let end = ridge_end(&points, &profile, context);
+    (points, end)
+}
+
+/// Beams inside a ridge's last point from which on its end is looked for.
+const END_BEAMS: f64 = 3.0;
+
+/// Where a ridge ends. `profile` holds its points and those beyond.
+///
+/// A crest is the highest of all places across the ridge: for a Gaussian profile of FWHM W and
+/// brightness B and noise smoothed by a beam of FWHM b the noise raises it by ¼ (W/b)² rms²/B
+/// on the mean, and moves it aside by 0.30 W²/b · rms/B (both where the noise's gradient,
+/// 1.67 rms/b, cancels that of the profile, 8 ln 2 B d/W²).
+fn ridge_end(
+    points: &[RidgePoint],
+    profile: &[RidgePoint],
+    context: &RidgeContext,
+) -> Option<RidgeEnd> {
+    let last = points.last()?;
+    let beam = context.beam;
+    let direction = local_direction(points, points.len() - 1);
+    let beam_width = beam.projected_fwhm(direction);
+    let width = points.iter().rev().find_map(|p| p.width.best()).unwrap_or(beam_width);
+    let ratio = (width / beam_width).max(1.0);
+    let excess: Vec<ProfilePoint> = profile
+        .iter()
+        .map(|p| {
+            let raised = (0.25 * ratio * ratio / p.signal_to_noise().max(1.0)).min(1.0);
+            let level = context.outline_sigma + raised;
+            ProfilePoint { distance: p.distance, excess: p.brightness - level * p.rms, rms: p.rms }
+        })
+        .collect();
+    let along_beam = beam.reach_along(direction);
+    let from = (last.distance - END_BEAMS * along_beam).max(0.0);
+    let (raw, along) =
+        last_above(&excess, from, along_beam).unwrap_or((last.distance, Wander::default()));
+    let distance = (raw - along.bias).max(0.5 * last.distance);
+    let bearing_at = |d: f64| {
+        let next = profile.partition_point(|p| p.distance <= d).clamp(1, profile.len().max(2) - 1);
+        let (Some(a), Some(b)) = (profile.get(next - 1), profile.get(next)) else {
+            return last.bearing_deg;
+        };
+        let t = ((d - a.distance) / (b.distance - a.distance)).clamp(0.0, 1.0);
+        a.bearing_deg + t * wrap_difference_deg(b.bearing_deg - a.bearing_deg)
+    };
+    let bearing_deg = bearing_at(distance);
+    let back = distance - (along.sigma() + along_beam).min(0.5 * distance);
+    let turn_deg = wrap_difference_deg(bearing_deg - bearing_at(back))
+        / (distance - back).max(f64::MIN_POSITIVE);
+    let across = (0.30 * ratio * ratio * beam_width / context.outline_sigma).min(0.42 * width);
+    Some(RidgeEnd {
+        offset: SkyOffset::polar(distance, wrap_directed_deg(bearing_deg)),
+        along,
+        across,
+        turn_deg,
+    })
 }
 
 /// Whether an offset falls on or next to a member pixel.
@@ -448,7 +645,9 @@ fn local_direction(points: &[RidgePoint], k: usize) -> f64 {
 
 /// FWHM of the transverse profile from its half-maximum crossings, and the same with the
 /// beam's projected width taken off in quadrature. Missing where the profile does not fall
-/// to half on both sides within three beams, or the crest is below 5σ.
+/// to half on both sides within three beams, or the crest is below 5σ. Diffuse emission under
+/// the ridge is taken off: the lower of the two brightnesses 1.5 widths aside, where it stands
+/// 2 rms high; half of what that changes counts as an error, since it need not be flat.
 ///
 /// Error: a crossing moves by (rms / slope); the slope of a Gaussian at half maximum is
 /// peak × 4 ln 2 / (2 FWHM) × 2 = peak × 1.386 / FWHM, so that both crossings together give
@@ -469,14 +668,15 @@ fn transverse_width(
     }
     let step = 0.1 * context.beam.minor;
     let reach = (3.0 * context.beam.major / step).ceil() as usize;
-    let half = 0.5 * point.brightness;
-    let crossing = |sign: f64| -> Option<f64> {
-        let across = SkyOffset::polar(sign, direction_deg + 90.0);
+    let beside = |aside: f64| {
+        let across = SkyOffset::polar(aside, direction_deg + 90.0);
+        window.cubic(context.frame.pixel(point.offset.plus(across)))
+    };
+    let crossing = |sign: f64, half: f64| -> Option<f64> {
         let mut previous = point.brightness;
         for k in 1..=reach {
             let distance = k as f64 * step;
-            let value =
-                window.cubic(context.frame.pixel(point.offset.plus(across.times(distance))))?;
+            let value = beside(sign * distance)?;
             if value <= half {
                 return Some(
                     distance - step * (half - value) / (previous - value).max(f64::MIN_POSITIVE),
@@ -486,11 +686,17 @@ fn transverse_width(
         }
         None
     };
-    let (Some(left), Some(right)) = (crossing(-1.0), crossing(1.0)) else {
-        return (missing, missing);
+    let between = |base: f64| {
+        let half = 0.5 * (point.brightness + base);
+        Some(crossing(-1.0, half)? + crossing(1.0, half)?)
     };
-    let width = left + right;
-    let sigma = 1.02 * width / signal;
+    let Some(raw) = between(0.0) else { return (missing, missing) };
+    // Diffuse emission under the ridge, as bright as beside it: above the noise on both sides.
+    let base = beside(-1.5 * raw).zip(beside(1.5 * raw)).map_or(0.0, |(a, b)| a.min(b));
+    let base = if base > 2.0 * point.rms { base } else { 0.0 };
+    let width = between(base).unwrap_or(raw);
+    let noise = 1.02 * width / signal * point.brightness / (point.brightness - base);
+    let sigma = noise.hypot(0.5 * (raw - width));
     let beam_width = context.beam.projected_fwhm(direction_deg);
     let square = width * width - beam_width * beam_width;
     let square_sigma = 2.0 * width * sigma;

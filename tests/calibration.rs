@@ -406,9 +406,18 @@ fn own_strip(truth: &Truth, aperture: &Value, swapped: bool) -> BTreeMap<&'stati
         fluxes.swap(0, 1);
         lobes.swap(0, 1);
     }
+    let true_index = |index: usize| if swapped { 1 - index } else { index };
+    let bearing = |index| truth.strip_bearing_deg(true_index(index), &aperture);
+    let opening = |index| truth.opening_angle_deg(true_index(index), &aperture);
+    let of_sides = [
+        ("sides.0.position_angle_deg", bearing(0)),
+        ("sides.1.position_angle_deg", bearing(1)),
+        ("sides.0.jet.opening_angle_deg", opening(0)),
+        ("sides.1.jet.opening_angle_deg", opening(1)),
+    ];
     // The strips' own fluxes carry the noise alone: they are those of the map as calibrated.
     let scale = truth.values.get("intrinsic.flux_scale_factor").unwrap_or(1.0);
-    BTreeMap::from([
+    let mut own = BTreeMap::from([
         ("brightness.jet_flux_density_mjy", scale * fluxes[0]),
         ("brightness.counter_jet_flux_density_mjy", scale * fluxes[1]),
         ("brightness.jet_to_counter_jet_ratio", fluxes[0] / fluxes[1]),
@@ -417,7 +426,9 @@ fn own_strip(truth: &Truth, aperture: &Value, swapped: bool) -> BTreeMap<&'stati
         ("sides.0.lobe.flux_density_mjy", lobes[0]),
         ("sides.1.lobe.flux_density_mjy", lobes[1]),
         ("source.lobe_flux_ratio", lobes[0] / lobes[1]),
-    ])
+    ]);
+    own.extend(of_sides.into_iter().filter_map(|(path, value)| Some((path, value?))));
+    own
 }
 
 /// Whether the description's host is left out.

@@ -1,6 +1,7 @@
 //! From what the stages found to the record: quantities formed, units put on, reasons given
 //! where there is no number. Every quantity is formed here or in the stage it names, once.
 
+mod jet;
 mod parts;
 mod roles;
 mod shape;
@@ -13,7 +14,7 @@ use std::collections::BTreeMap;
 
 use self::parts::{component_records, component_separation, core_axes_mas, core_component};
 use self::roles::order_sides;
-use self::shape::{Arms, arms, fr_ratios, measure_extents};
+use self::shape::{Arms, arms, fr_ratios, measure_extents, symmetry};
 use self::side::side_record;
 use self::strips::brightness_record;
 use self::sums::{core_sum, lobe_flux_ratio, sum_parts};
@@ -257,7 +258,7 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         lobe_flux_ratio: lobe_flux_ratio(findings, &sums, order.index),
         misalignment_deg: arms.misalignment_deg,
         bend_deg: arms.bend_deg,
-        symmetry: OrMissing::missing(Because::NotImplemented),
+        symmetry: symmetry([sides[0].bend_deg, sides[1].bend_deg]),
         axial_ratio: units.deconvolved(extents.axial_ratio),
         core_prominence: prominence,
         core_prominence_rest: redshift_used(map).map_or(

@@ -1,16 +1,17 @@
 //! The record of one side.
 
 use super::Findings;
-use super::shape::end_sigma;
+use super::jet::jet_record;
+use super::shape::{over_size, side_end, with_outline};
 use super::sums::Sums;
 use super::units::Units;
 use crate::brightness::positive_upper_limit;
-use crate::extent::{Extent, FARTHEST_POINT, feature_sigma, position_sigma};
-use crate::measurement::{Bare, Because, Measurement, OrMissing};
-use crate::record::{HotspotRecord, JetRecord, LobeRecord, RidgePointRecord, Role, SideRecord};
+use crate::measurement::{Because, Measurement, OrMissing};
+use crate::record::{HotspotRecord, LobeRecord, RidgePointRecord, Role, SideRecord};
 use crate::ridge::Ridge;
-use crate::source::sides::{BRIGHTEST_BEYOND_BEAMS, end_offset};
-use crate::units::{Pixel, wrap_difference_deg, wrap_directed_deg};
+use crate::source::sides::BRIGHTEST_BEYOND_BEAMS;
+use crate::stats::normal_deviate;
+use crate::units::{wrap_difference_deg, wrap_directed_deg};
 
 pub(super) fn side_record(
     findings: &Findings,
@@ -34,28 +35,19 @@ pub(super) fn side_record(
         let mut record = SideRecord::missing(role, Because::SideNotDetected);
         record.flux_density_mjy = flux;
         record.jet.flux_density_mjy = jet_flux(findings, units, k);
-        record.jet.criteria = OrMissing::missing(Because::NotImplemented);
         return record;
     }
     let beam = &findings.observed.working_beam;
     let core_sigma = model.core.position_sigma;
-    let end = end_offset(ridge, side);
-    let end_sigma = end_sigma(findings, k);
-    let end_pa = end.map_or(Measurement::missing(Because::SideNotDetected), |e| {
-        Measurement::symmetric(
-            e.position_angle_deg(),
-            (end_sigma.hypot(core_sigma) / e.radius()).to_degrees(),
-        )
-    });
-    let bearing_sigma = |distance: f64, signal: f64| {
-        ((position_sigma(beam.mean_fwhm(), signal)).hypot(core_sigma) / distance).to_degrees()
-    };
+    let end = side_end(findings, k, true);
+    let end_pa =
+        end.map_or(Measurement::missing(Because::SideNotDetected), |e| e.position_angle_deg());
     let inner_distance = 2.0 * beam.major;
     let inner_pa = ridge.points.iter().find(|p| p.distance >= inner_distance).map_or(
         Measurement::missing(Because::JetNotDetected),
         |p| {
-            let sigma = bearing_sigma(inner_distance, p.signal_to_noise());
-            Measurement::symmetric(ridge.bearing_at(inner_distance), sigma)
+            let sigma = p.aside_sigma().hypot(core_sigma) / inner_distance;
+            Measurement::symmetric(ridge.bearing_at(inner_distance), sigma.to_degrees())
         },
     );
     let bend = match (end_pa, inner_pa) {
@@ -72,10 +64,9 @@ pub(super) fn side_record(
         east_arcsec: units.bare_arcsec(h.offset.east),
         north_arcsec: units.bare_arcsec(h.offset.north),
         distance_arcsec: units
-            .arcsec(Measurement::symmetric(h.distance(), end_sigma.hypot(core_sigma))),
+            .arcsec(end.map_or(Measurement::missing(Because::NoHotspot), |end| end.distance())),
         position_angle_deg: end_pa,
-        peak_brightness_mjy_per_beam: units
-            .brightness(h.peak.value, h.peak.value / h.peak.signal_to_noise),
+        peak_brightness_mjy_per_beam: units.brightness(h.peak.value, h.brightness_sigma),
         signal_to_noise: h.peak.signal_to_noise,
     });
     let record_index = usize::from(matches!(role, Role::CounterJet | Role::Second));
@@ -89,24 +80,17 @@ pub(super) fn side_record(
         bend_deg: bend,
         length_arcsec: units.arcsec(size),
         length_px: units.px(size),
-        ridge_length_arcsec: if ridge.points.is_empty() {
-            Measurement::missing(Because::JetNotDetected)
-        } else {
-            units.arcsec(Measurement::symmetric(
-                ridge.length(),
-                (0.1 * beam.mean_fwhm()).hypot(core_sigma),
-            ))
-        },
+        ridge_length_arcsec: ridge.length(beam.mean_fwhm(), settings.outline_sigma).map_or(
+            Measurement::missing(Because::JetNotDetected),
+            |(length, minus, plus)| {
+                let (minus, plus) = (minus.hypot(core_sigma), plus.hypot(core_sigma));
+                units.arcsec(cut(Measurement::value(length, minus, plus)))
+            },
+        ),
         length_kpc: Measurement::missing(Because::NoRedshift),
         flux_density_mjy: flux,
         fr_ratio: fr,
-        jet: JetRecord {
-            detected: strip_signal(findings, k).is_some_and(|s| s >= settings.ratio_value_sigma),
-            criteria: OrMissing::missing(Because::NotImplemented),
-            flux_density_mjy: jet_flux(findings, units, k),
-            opening_angle_deg: Measurement::missing(Because::NotImplemented),
-            width_exponent: Bare::missing(Because::NotImplemented),
-        },
+        jet: jet_record(findings, units, k),
         hotspot: OrMissing::from_option(hotspot, Because::NoHotspot),
         lobe,
         ridge: ridge
@@ -131,40 +115,26 @@ pub(super) fn side_size(findings: &Findings, k: usize) -> (Measurement, Measurem
     let none = Measurement::missing(Because::SideNotDetected);
     let Some((_, features)) = &model.sides else { return (none, none) };
     let Some((pixel, offset)) = features[k].farthest else { return (none, none) };
-    let beam = &observed.working_beam;
-    let peaks: Vec<(Pixel, f64)> = model.peaks.iter().map(|p| (p.pixel, p.value)).collect();
-    let extent = Extent::between(
-        &model.window,
-        &model.frame,
-        beam,
-        model.level,
-        &peaks,
-        [model.frame.origin, pixel],
-    );
-    let length = offset.radius();
-    let sigma = (FARTHEST_POINT * extent.ends[1].sigma).hypot(model.core.position_sigma);
-    let size = if model.side_cut[k] {
-        Measurement::lower_limit(length, settings.confidence)
-    } else {
-        Measurement::symmetric(length, sigma)
-    };
+    let extent = with_outline(findings, |outline| outline.between([model.frame.origin, pixel]));
+    let wander = extent.ends[1].wander;
+    let length = (offset.radius() - wander.bias).max(0.0);
+    let core = model.core.position_sigma;
+    let size = Measurement::value(length, wander.minus.hypot(core), wander.plus.hypot(core));
+    if model.side_cut[k] {
+        let least = length - normal_deviate(settings.confidence) * wander.minus.hypot(core);
+        let size = Measurement::lower_limit(least, settings.confidence);
+        // What lies beyond the edge may be brighter.
+        return (size, Measurement::missing(Because::LeavesMap));
+    }
+    let nearest = BRIGHTEST_BEYOND_BEAMS * observed.working_beam.major;
     let fr = match features[k].brightest {
         Some(f) => {
-            let ratio = f.distance() / length;
-            let error = feature_sigma(beam.mean_fwhm(), f.peak.signal_to_noise);
-            Measurement::symmetric(ratio, ratio * (error / f.distance()).hypot(sigma / length))
+            let sigma = f.sigma_along(f.offset.position_angle_deg());
+            over_size(f.distance(), sigma, size, false, findings)
         }
-        None => Measurement::upper_limit(
-            (BRIGHTEST_BEYOND_BEAMS * beam.major / length).min(1.0),
-            settings.confidence,
-        ),
+        None => over_size(features[k].falls_from.max(nearest), 0.0, size, true, findings),
     };
-    (size, if model.side_cut[k] { fr_of_cut(fr, settings.confidence) } else { fr })
-}
-
-/// A ratio over a length that is only known from below is an upper limit.
-pub(super) fn fr_of_cut(fr: Measurement, confidence: f64) -> Measurement {
-    fr.best().map_or(fr, |value| Measurement::upper_limit(value, confidence))
+    (size, fr)
 }
 
 /// Flux-weighted bearing of a ridge inside the strip.
@@ -188,13 +158,8 @@ pub(super) fn mean_bearing(findings: &Findings, ridge: &Ridge, core_sigma: f64) 
         / weight;
     // Points closer than a beam share their noise: as many independent ones as beams.
     let beams = ((strip.outer - strip.inner) / beam.major).max(1.0);
-    let mean_square: f64 = inside
-        .iter()
-        .map(|p| {
-            p.brightness / weight
-                * (position_sigma(beam.mean_fwhm(), p.signal_to_noise()) / p.distance).powi(2)
-        })
-        .sum();
+    let mean_square: f64 =
+        inside.iter().map(|p| p.brightness / weight * (p.aside_sigma() / p.distance).powi(2)).sum();
     let middle = 0.5 * (strip.inner + strip.outer);
     let sigma = (mean_square / beams).sqrt().hypot(core_sigma / middle).to_degrees();
     Measurement::symmetric(wrap_directed_deg(first.bearing_deg + turn), sigma)

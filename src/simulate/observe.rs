@@ -105,23 +105,27 @@ impl Observation {
         piece.flux_mjy * area(&self.beam_px) / area(seen)
     }
 
+    /// Pieces as the beam shows them, ready to be looked at in many places.
+    pub fn seen<'a>(&self, pieces: impl IntoIterator<Item = &'a SkyGaussian>) -> SeenPieces {
+        let pieces = pieces
+            .into_iter()
+            .map(|piece| {
+                let seen @ [xx, xy, yy] = self.seen_px(piece);
+                let area = xx * yy - xy * xy;
+                let inverse = [yy / area, -xy / area, xx / area];
+                (self.frame.pixel(piece.offset), self.peak(piece, &seen), inverse)
+            })
+            .collect();
+        SeenPieces { frame: self.frame, pieces }
+    }
+
     /// Brightness of pieces at an offset from the core, mJy/beam.
     pub fn brightness_at<'a>(
         &self,
         pieces: impl IntoIterator<Item = &'a SkyGaussian>,
         offset: SkyOffset,
     ) -> f64 {
-        let at = self.frame.pixel(offset);
-        pieces
-            .into_iter()
-            .map(|piece| {
-                let seen @ [xx, xy, yy] = self.seen_px(piece);
-                let centre = self.frame.pixel(piece.offset);
-                let (dx, dy) = (at.x - centre.x, at.y - centre.y);
-                let q = (yy * dx * dx - 2.0 * xy * dx * dy + xx * dy * dy) / (xx * yy - xy * xy);
-                self.peak(piece, &seen) * libm::exp(-4.0 * std::f64::consts::LN_2 * q)
-            })
-            .sum()
+        self.seen(pieces).brightness(offset)
     }
 
     /// FWHM of a piece after the beam along a direction's marginal (arcsec): what it looks
@@ -132,6 +136,29 @@ impl Observation {
         let (sin, cos) = libm::sincos(pa_deg.to_radians());
         let [ee, en, nn] = [0, 1, 2].map(|i| own[i] + beam[i]);
         (ee * sin * sin + 2.0 * en * sin * cos + nn * cos * cos).max(0.0).sqrt()
+    }
+}
+
+/// Pieces of a source as the beam shows them.
+pub struct SeenPieces {
+    frame: LocalFrame,
+    /// Centre on the array, peak in mJy/beam, inverse moments per px².
+    pieces: Vec<(Pixel, f64, [f64; 3])>,
+}
+
+impl SeenPieces {
+    /// Brightness at an offset from the core, mJy/beam.
+    pub fn brightness(&self, offset: SkyOffset) -> f64 {
+        let at = self.frame.pixel(offset);
+        self.pieces
+            .iter()
+            .map(|(centre, peak, [xx, xy, yy])| {
+                let (dx, dy) = (at.x - centre.x, at.y - centre.y);
+                let q = xx * dx * dx + 2.0 * xy * dx * dy + yy * dy * dy;
+                // Farther out than five FWHM a piece adds less than 1e-30 of its peak.
+                if q > 25.0 { 0.0 } else { peak * libm::exp(-4.0 * std::f64::consts::LN_2 * q) }
+            })
+            .sum()
     }
 }
 

@@ -179,13 +179,21 @@ pub fn truth(source: TwinSource, observation: Observation, made: &TruthInput) ->
     let outline = outline(&observation, made.whole, level, made.rms_mjy_per_beam);
     let aperture = nominal_aperture(&source, &observation, made.parameters);
     let mut truth = Truth { values: Values::default(), source, observation, order: [0, 1] };
-    let ends = [0, 1].map(|side| truth.end_of(side, made.parameters, level));
+    let crests = [0, 1].map(|side| truth.crest(side, level));
+    // Where a side ends: its hot spot, else its crest.
+    let ends = [0, 1].map(|side| {
+        if made.parameters.hotspots.flux_density_mjy > 0.0 {
+            Some(truth.source.paths[side].at(truth.source.arms_arcsec[side]).0)
+        } else {
+            crests[side].last().copied()
+        }
+    });
     truth.order = truth.roles(ends);
     truth.put_core(made);
     truth.put_whole(made, outline.as_ref(), level);
     truth.put_shape(made, ends, outline.as_ref(), &nearer, level);
     for (index, side) in truth.order.into_iter().enumerate() {
-        truth.put_side(index, side, made, ends[side]);
+        truth.put_side(index, side, made, ends[side], &crests[side]);
     }
     if let Some(aperture) = aperture {
         truth.put_strips(aperture);
@@ -316,26 +324,63 @@ impl Truth {
             * share_between(0.0, across, -half, half)
     }
 
-    /// Where a side ends: its hot spot, else its ridge's last point.
-    fn end_of(&self, side: usize, p: &Parameters, level: f64) -> Option<SkyOffset> {
+    /// The crest of a side's emission on the noise-free map without the core, to where it last
+    /// stands at the level; empty where it never does.
+    ///
+    /// It is followed outwards on circles about the core, from the jet's own bearing at one beam:
+    /// on each circle uphill from the place before to the nearest maximum. Where it falls below
+    /// the level it is followed on as far as the source reaches, and counts again if it rises.
+    fn crest(&self, side: usize, level: f64) -> Vec<SkyOffset> {
+        let observation = &self.observation;
+        let beam = observation.beam.minor;
         let path = &self.source.paths[side];
-        if p.hotspots.flux_density_mjy > 0.0 {
-            return Some(path.at(self.source.arms_arcsec[side]).0);
-        }
-        self.ridge_length_arcsec(side, level).map(|t| path.at(t).0)
-    }
-
-    /// Length along a side's path at which it last stands above the contour.
-    fn ridge_length_arcsec(&self, side: usize, level: f64) -> Option<f64> {
-        const STEPS: usize = 150;
-        let path = &self.source.paths[side];
-        let step = (path.length_arcsec + 2.0 * self.observation.beam.major) / STEPS as f64;
         // The core's own beam is no side.
-        let rest = || self.source.parts.iter().filter(|piece| piece.part != Part::Core);
-        (1..=STEPS)
-            .rev()
-            .map(|i| i as f64 * step)
-            .find(|&t| self.observation.brightness_at(rest(), path.at(t).0) >= level)
+        let pieces = observation.seen(self.source.parts.iter().filter(|p| p.part != Part::Core));
+        let farthest = self
+            .source
+            .parts
+            .iter()
+            .map(|piece| piece.offset.radius() + piece.along_arcsec.max(piece.across_arcsec));
+        let farthest = farthest.fold(path.length_arcsec, f64::max) + 2.0 * observation.beam.major;
+        let step = 0.2 * beam;
+        let circles = ((farthest / step).ceil() as usize).min(4000);
+        let start = path.reaching(observation.beam.major).unwrap_or(path.length_arcsec);
+        let mut bearing_deg = path.at(start).0.position_angle_deg();
+        let mut points: Vec<SkyOffset> = Vec::new();
+        let (mut last, mut previous) = (0, f64::NEG_INFINITY);
+        for circle in 1..=circles {
+            let radius = circle as f64 * step;
+            let at = |pa_deg: f64| pieces.brightness(SkyOffset::polar(radius, pa_deg));
+            if radius >= observation.beam.major {
+                let fine_deg = (0.04 * beam / radius).to_degrees();
+                let mut here = at(bearing_deg);
+                for sign in [-1.0, 1.0] {
+                    loop {
+                        let next = at(bearing_deg + sign * fine_deg);
+                        if next <= here {
+                            break;
+                        }
+                        (here, bearing_deg) = (next, bearing_deg + sign * fine_deg);
+                    }
+                }
+            }
+            let brightness = at(bearing_deg);
+            let place = SkyOffset::polar(radius, bearing_deg);
+            if brightness >= level {
+                points.push(place);
+                last = points.len();
+            } else if previous >= level {
+                // The end proper, between this circle and the one before.
+                let back = step * (level - brightness) / (previous - brightness);
+                points.push(SkyOffset::polar(radius - back, bearing_deg));
+                last = points.len();
+            } else {
+                points.push(place);
+            }
+            previous = brightness;
+        }
+        points.truncate(last);
+        points
     }
 
     /// Which side of the source comes first: the jet where flow and angle make one, else the
@@ -493,7 +538,14 @@ impl Truth {
         }
     }
 
-    fn put_side(&mut self, index: usize, side: usize, made: &TruthInput, end: Option<SkyOffset>) {
+    fn put_side(
+        &mut self,
+        index: usize,
+        side: usize,
+        made: &TruthInput,
+        end: Option<SkyOffset>,
+        crest: &[SkyOffset],
+    ) {
         let p = made.parameters;
         let path = self.source.paths[side].clone();
         let beam_major = self.observation.beam.major;
@@ -510,8 +562,15 @@ impl Truth {
         let hotspot = (hotspot_flux > 0.0).then(|| path.at(self.source.arms_arcsec[side]).0);
         let hotspot_peak = hotspot.map(|at| self.observation.brightness_at(&self.source.parts, at));
         let frame = self.observation.frame;
-        let level = self.values.get("source.contour_mjy_per_beam").unwrap_or(f64::INFINITY);
-        let ridge_length = self.ridge_length_arcsec(side, level);
+        let ridge_length = crest.last().map(|_| {
+            let mut previous = SkyOffset::default();
+            let mut steps = crest.iter().map(|&place| {
+                let step = place.minus(previous).radius();
+                previous = place;
+                step
+            });
+            steps.by_ref().sum::<f64>()
+        });
         let values = &mut self.values;
         values.value(&key("role"), json!(role));
         values.optional(&key("inner_position_angle_deg"), inner_deg);
@@ -579,28 +638,30 @@ impl Truth {
             .sum()
     }
 
+    /// Bearing of a side's jet (an index of `sides`) inside the strips, weighted by flux.
+    pub fn strip_bearing_deg(&self, index: usize, aperture: &Aperture) -> Option<f64> {
+        let side = self.order[index.min(1)];
+        let pieces: Vec<(f64, f64)> = self
+            .jet_pieces(side)
+            .map(|piece| {
+                let weight = piece.flux_mjy * self.inside(piece, aperture);
+                (piece.offset.position_angle_deg(), weight)
+            })
+            .filter(|(_, weight)| *weight > 0.0)
+            .collect();
+        let (first, _) = *pieces.iter().max_by(|a, b| a.1.total_cmp(&b.1))?;
+        let sum: f64 = pieces.iter().map(|p| p.1).sum();
+        let turn: f64 =
+            pieces.iter().map(|p| p.1 * wrap_difference_deg(p.0 - first)).sum::<f64>() / sum;
+        Some(wrap_directed_deg(first + turn))
+    }
+
     fn put_strips(&mut self, aperture: Aperture) {
         let fluxes = self.strip_fluxes_mjy(&aperture);
         let edge = aperture.outer_arcsec + self.observation.beam.major;
         let lobes = [0, 1].map(|index| self.flux_beyond_mjy(index, edge));
-        let bearing = |index: usize| {
-            let side = self.order[index];
-            let pieces: Vec<(f64, f64)> = self
-                .jet_pieces(side)
-                .map(|piece| {
-                    let weight = piece.flux_mjy * self.inside(piece, &aperture);
-                    (piece.offset.position_angle_deg(), weight)
-                })
-                .filter(|(_, weight)| *weight > 0.0)
-                .collect();
-            let (first, _) = *pieces.iter().max_by(|a, b| a.1.total_cmp(&b.1))?;
-            let sum: f64 = pieces.iter().map(|p| p.1).sum();
-            let turn: f64 =
-                pieces.iter().map(|p| p.1 * wrap_difference_deg(p.0 - first)).sum::<f64>() / sum;
-            Some(wrap_directed_deg(first + turn))
-        };
-        let bearings = [bearing(0), bearing(1)];
-        let opening = self.opening_angle_deg(&aperture);
+        let bearings = [0, 1].map(|index| self.strip_bearing_deg(index, &aperture));
+        let opening = [0, 1].map(|index| self.opening_angle_deg(index, &aperture));
         let values = &mut self.values;
         let Aperture { inner_arcsec, outer_arcsec, half_width_arcsec } = aperture;
         values.number("brightness.aperture.inner_arcsec", inner_arcsec);
@@ -615,7 +676,7 @@ impl Truth {
             let key = |name: &str| format!("sides.{index}.{name}");
             values.number(&key("jet.flux_density_mjy"), fluxes[index]);
             values.optional(&key("position_angle_deg"), bearings[index]);
-            values.optional(&key("jet.opening_angle_deg"), opening);
+            values.optional(&key("jet.opening_angle_deg"), opening[index]);
             values.number(&key("lobe.flux_density_mjy"), lobes[index]);
         }
         if lobes[1] > 0.0 {
@@ -623,16 +684,17 @@ impl Truth {
         }
     }
 
-    /// Median of 2 atan(½ width/distance) over the strip.
-    fn opening_angle_deg(&self, aperture: &Aperture) -> Option<f64> {
+    /// Median of 2 atan(½ width/distance) of a side's jet (an index of `sides`) over the strip;
+    /// none for a jet without width.
+    pub fn opening_angle_deg(&self, index: usize, aperture: &Aperture) -> Option<f64> {
         const POINTS: usize = 21;
+        let path = &self.source.paths[self.order[index.min(1)]];
         let mut angles: Vec<f64> = (0..POINTS)
             .filter_map(|i| {
                 let share = (i as f64 + 0.5) / POINTS as f64;
                 let radius =
                     aperture.inner_arcsec + share * (aperture.outer_arcsec - aperture.inner_arcsec);
-                let t = self.source.paths[0].reaching(radius)?;
-                let width = self.source.jet_width_at(t);
+                let width = self.source.jet_width_at(path.reaching(radius)?);
                 Some(2.0 * libm::atan(0.5 * width / radius).to_degrees())
             })
             .collect();

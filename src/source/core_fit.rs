@@ -616,7 +616,7 @@ fn normal_equations(
 }
 
 /// Usable cells of the window within a distance of a map position.
-fn cells_within(window: &Window, centre: Pixel, radius_px: f64) -> Vec<(usize, usize)> {
+pub(super) fn cells_within(window: &Window, centre: Pixel, radius_px: f64) -> Vec<(usize, usize)> {
     let (cx, cy) = (centre.x - window.x0 as f64, centre.y - window.y0 as f64);
     let low = |v: f64| (v - radius_px).ceil().max(0.0) as usize;
     let high = |v: f64, n: usize| ((v + radius_px).floor().min(n as f64 - 1.0)).max(-1.0) as i64;

@@ -6,6 +6,7 @@ pub mod core;
 pub mod core_fit;
 #[cfg(test)]
 mod core_tests;
+pub mod hotspot;
 pub mod sides;
 
 use image::{GrayImage, Luma};
@@ -26,7 +27,7 @@ use crate::window::Window;
 use self::associate::SourceRegions;
 use self::core::{Core, HOST_SIGMA_BEAMS, KnownCore, Peak, choose_core, is_detected};
 use self::core_fit::{FitContext, Placing, PointFit, fit_core};
-use self::sides::{SideFeatures, find_features, side_of};
+use self::sides::{FeatureInput, SideFeatures, find_features, side_of};
 
 /// What the source stages need to know of the map.
 #[derive(Clone, Copy)]
@@ -191,7 +192,16 @@ pub fn model_source(input: &SourceInput) -> Option<SourceModel> {
     }
     let sides = ridges.map(|ridges| {
         let detected = core.fit.is_some();
-        let features = find_features(&peaks, &points, &ridges, &frame, input.beam, level, detected);
+        let features = find_features(&FeatureInput {
+            peaks: &peaks,
+            contour: &points,
+            ridges: &ridges,
+            frame: &frame,
+            beam: input.beam,
+            core_detected: detected,
+            window: &coreless,
+            noise: (input.noise, input.correlation),
+        });
         (ridges, features)
     });
     let side_cut = sides.as_ref().map_or([!open_ends.is_empty(); 2], |(ridges, features)| {

@@ -26,6 +26,10 @@ pub struct Wander {
     pub minus: f64,
     /// How far it may lie beyond it: 1σ.
     pub plus: f64,
+    /// The same for the 95 % interval.
+    pub minus95: f64,
+    /// The same for the 95 % interval.
+    pub plus95: f64,
 }
 
 impl Wander {
@@ -35,7 +39,13 @@ impl Wander {
         let at = |q: f64| sorted_quantile(&ends, q).unwrap_or(0.0);
         let bias = at(0.5);
         // An end that was carried out lies farther in than it seems.
-        Self { bias, minus: at(0.841_345) - bias, plus: bias - at(0.158_655) }
+        Self {
+            bias,
+            minus: at(0.841_345) - bias,
+            plus: bias - at(0.158_655),
+            minus95: at(0.975) - bias,
+            plus95: bias - at(0.025),
+        }
     }
 
     /// 1σ, the mean of both sides.

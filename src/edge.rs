@@ -14,7 +14,6 @@ use std::sync::OnceLock;
 use rand::{Rng, SeedableRng};
 use rand_pcg::Pcg64Mcg;
 
-
 use crate::stats::{normal_deviate, sorted_quantile};
 
 /// What noise does to an outermost point.
@@ -39,13 +38,11 @@ impl Wander {
         let at = |q: f64| sorted_quantile(&ends, q).unwrap_or(0.0);
         let bias = at(0.5);
         // An end that was carried out lies farther in than it seems.
-        Self {
-            bias,
-            minus: at(0.841_345) - bias,
-            plus: bias - at(0.158_655),
-            minus95: at(0.975) - bias,
-            plus95: bias - at(0.025),
-        }
+        let (minus, plus) = (at(0.841_345) - bias, bias - at(0.158_655));
+        // Few lines reach that far: the tail is at least a Gaussian's.
+        let (minus95, plus95) =
+            ((at(0.975) - bias).max(1.96 * minus), (bias - at(0.025)).max(1.96 * plus));
+        Self { bias, minus, plus, minus95, plus95 }
     }
 
     /// 1σ, the mean of both sides.

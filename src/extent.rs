@@ -101,9 +101,7 @@ impl Outline<'_> {
     pub fn between(&self, points: [Pixel; 2]) -> Extent {
         let chord = self.frame.difference(points[0], points[1]);
         let (length, pa_deg) = (chord.radius(), chord.position_angle_deg());
-        self.extent(points, length, pa_deg, |k, p| {
-            self.frame.separation(points[1 - k], p) - length
-        })
+        self.extent(points, length, pa_deg, |k, p| self.frame.separation(points[1 - k], p) - length)
     }
 
     /// The extent along a direction between the two points that lie farthest out in it.

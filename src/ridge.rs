@@ -210,9 +210,8 @@ impl Ridge {
             return None;
         }
         let total: f64 = points.iter().map(|p| p.2).sum();
-        let mean = |f: fn(&(f64, f64, f64)) -> f64| {
-            points.iter().map(|p| p.2 * f(p)).sum::<f64>() / total
-        };
+        let mean =
+            |f: fn(&(f64, f64, f64)) -> f64| points.iter().map(|p| p.2 * f(p)).sum::<f64>() / total;
         let (x, y) = (mean(|p| p.0), mean(|p| p.1));
         let product: f64 = points.iter().map(|p| p.2 * (p.0 - x) * (p.1 - y)).sum();
         let square: f64 = points.iter().map(|p| p.2 * (p.0 - x).powi(2)).sum();
@@ -546,7 +545,8 @@ fn ridge_end(
         .collect();
     let along_beam = beam.reach_along(direction);
     let from = (last.distance - END_BEAMS * along_beam).max(0.0);
-    let (raw, along) = last_above(&excess, from, along_beam).unwrap_or((last.distance, Wander::default()));
+    let (raw, along) =
+        last_above(&excess, from, along_beam).unwrap_or((last.distance, Wander::default()));
     let distance = (raw - along.bias).max(0.5 * last.distance);
     let bearing_at = |d: f64| {
         let next = profile.partition_point(|p| p.distance <= d).clamp(1, profile.len().max(2) - 1);
@@ -558,9 +558,15 @@ fn ridge_end(
     };
     let bearing_deg = bearing_at(distance);
     let back = distance - (along.sigma() + along_beam).min(0.5 * distance);
-    let turn_deg = wrap_difference_deg(bearing_deg - bearing_at(back)) / (distance - back).max(f64::MIN_POSITIVE);
+    let turn_deg = wrap_difference_deg(bearing_deg - bearing_at(back))
+        / (distance - back).max(f64::MIN_POSITIVE);
     let across = (0.30 * ratio * ratio * beam_width / context.outline_sigma).min(0.42 * width);
-    Some(RidgeEnd { offset: SkyOffset::polar(distance, wrap_directed_deg(bearing_deg)), along, across, turn_deg })
+    Some(RidgeEnd {
+        offset: SkyOffset::polar(distance, wrap_directed_deg(bearing_deg)),
+        along,
+        across,
+        turn_deg,
+    })
 }
 
 /// Whether an offset falls on or next to a member pixel.

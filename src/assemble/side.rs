@@ -40,9 +40,8 @@ pub(super) fn side_record(
     let beam = &findings.observed.working_beam;
     let core_sigma = model.core.position_sigma;
     let end = side_end(findings, k, true);
-    let end_pa = end.map_or(Measurement::missing(Because::SideNotDetected), |e| {
-        e.position_angle_deg()
-    });
+    let end_pa =
+        end.map_or(Measurement::missing(Because::SideNotDetected), |e| e.position_angle_deg());
     let inner_distance = 2.0 * beam.major;
     let inner_pa = ridge.points.iter().find(|p| p.distance >= inner_distance).map_or(
         Measurement::missing(Because::JetNotDetected),
@@ -64,12 +63,10 @@ pub(super) fn side_record(
         y_px: h.peak.pixel.y,
         east_arcsec: units.bare_arcsec(h.offset.east),
         north_arcsec: units.bare_arcsec(h.offset.north),
-        distance_arcsec: units.arcsec(
-            end.map_or(Measurement::missing(Because::NoHotspot), |end| end.distance()),
-        ),
+        distance_arcsec: units
+            .arcsec(end.map_or(Measurement::missing(Because::NoHotspot), |end| end.distance())),
         position_angle_deg: end_pa,
-        peak_brightness_mjy_per_beam: units
-            .brightness(h.peak.value, h.brightness_sigma),
+        peak_brightness_mjy_per_beam: units.brightness(h.peak.value, h.brightness_sigma),
         signal_to_noise: h.peak.signal_to_noise,
     });
     let record_index = usize::from(matches!(role, Role::CounterJet | Role::Second));
@@ -165,13 +162,8 @@ pub(super) fn mean_bearing(findings: &Findings, ridge: &Ridge, core_sigma: f64) 
         / weight;
     // Points closer than a beam share their noise: as many independent ones as beams.
     let beams = ((strip.outer - strip.inner) / beam.major).max(1.0);
-    let mean_square: f64 = inside
-        .iter()
-        .map(|p| {
-            p.brightness / weight
-                * (p.aside_sigma() / p.distance).powi(2)
-        })
-        .sum();
+    let mean_square: f64 =
+        inside.iter().map(|p| p.brightness / weight * (p.aside_sigma() / p.distance).powi(2)).sum();
     let middle = 0.5 * (strip.inner + strip.outer);
     let sigma = (mean_square / beams).sqrt().hypot(core_sigma / middle).to_degrees();
     Measurement::symmetric(wrap_directed_deg(first.bearing_deg + turn), sigma)

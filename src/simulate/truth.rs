@@ -347,9 +347,11 @@ impl Truth {
         let path = &self.source.paths[side];
         // The core's own beam is no side.
         let pieces = observation.seen(self.source.parts.iter().filter(|p| p.part != Part::Core));
-        let farthest = self.source.parts.iter().map(|piece| {
-            piece.offset.radius() + piece.along_arcsec.max(piece.across_arcsec)
-        });
+        let farthest = self
+            .source
+            .parts
+            .iter()
+            .map(|piece| piece.offset.radius() + piece.along_arcsec.max(piece.across_arcsec));
         let farthest = farthest.fold(path.length_arcsec, f64::max) + 2.0 * observation.beam.major;
         let step = 0.2 * beam;
         let circles = ((farthest / step).ceil() as usize).min(4000);
@@ -545,13 +547,7 @@ impl Truth {
         }
     }
 
-    fn put_side(
-        &mut self,
-        index: usize,
-        side: usize,
-        made: &TruthInput,
-        end: Option<SkyOffset>,
-    ) {
+    fn put_side(&mut self, index: usize, side: usize, made: &TruthInput, end: Option<SkyOffset>) {
         let p = made.parameters;
         let path = self.source.paths[side].clone();
         let beam_major = self.observation.beam.major;

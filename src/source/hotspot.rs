@@ -174,9 +174,8 @@ fn fit_once(
             let line = jet.map_or(0.0, |jet_deg| linear[count - 1] * half_line(beam, d, jet_deg));
             linear[0] * beam.profile(d) + line
         };
-        let slope = |d: SkyOffset, by: SkyOffset| {
-            (part(d.minus(by)) - part(d.plus(by))) / (2.0 * step)
-        };
+        let slope =
+            |d: SkyOffset, by: SkyOffset| (part(d.minus(by)) - part(d.plus(by))) / (2.0 * step);
         let full: Vec<([f64; COLUMNS], f64)> = cells
             .iter()
             .zip(&rows)
@@ -219,10 +218,7 @@ fn fit_once(
 
 /// Least-squares coefficients of the first `count` columns, and the inverse of the normal
 /// matrix.
-fn solve(
-    rows: &[([f64; COLUMNS], f64)],
-    count: usize,
-) -> Option<([f64; COLUMNS], Vec<Vec<f64>>)> {
+fn solve(rows: &[([f64; COLUMNS], f64)], count: usize) -> Option<([f64; COLUMNS], Vec<Vec<f64>>)> {
     let mut normal = vec![vec![0.0; count]; count];
     let mut right = [0.0; COLUMNS];
     for (row, value) in rows {

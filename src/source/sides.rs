@@ -184,7 +184,8 @@ fn placed(input: &FeatureInput, ridge: &Ridge, peak: &Peak, offset: SkyOffset) -
         Some(spot) => {
             // A maximum too broad for a beam-shaped component is where it seems to be.
             let share = spot.component / spot.brightness;
-            let trust = ((share - LEAST_COMPONENT) / (FULL_COMPONENT - LEAST_COMPONENT)).clamp(0.0, 1.0);
+            let trust =
+                ((share - LEAST_COMPONENT) / (FULL_COMPONENT - LEAST_COMPONENT)).clamp(0.0, 1.0);
             let shift = frame.difference(peak.pixel, spot.pixel);
             let mut covariance = spot.covariance;
             widen(&mut covariance, shift, 1.0 - trust);
@@ -285,11 +286,7 @@ fn widen(covariance: &mut [f64; 3], shift: SkyOffset, probability: f64) {
 
 /// The brightest of the peaks that stand out. Where others are as bright within the noise, the
 /// place is unsure by their distances.
-fn brightest(
-    input: &FeatureInput,
-    ridge: &Ridge,
-    peaks: &[(Peak, SkyOffset)],
-) -> Option<Feature> {
+fn brightest(input: &FeatureInput, ridge: &Ridge, peaks: &[(Peak, SkyOffset)]) -> Option<Feature> {
     let standing: Vec<_> =
         peaks.iter().copied().filter(|(p, o)| stands_out(input, ridge, p, *o)).collect();
     let &(peak, offset) = standing.iter().max_by(|a, b| a.0.value.total_cmp(&b.0.value))?;

@@ -25,6 +25,10 @@ pub struct Wander {
     pub minus: f64,
     /// How far it may lie beyond it: 1σ.
     pub plus: f64,
+    /// The same for the 95 % interval.
+    pub minus95: f64,
+    /// The same for the 95 % interval.
+    pub plus95: f64,
 }
 
 impl Wander {
@@ -34,7 +38,11 @@ impl Wander {
         let at = |q: f64| sorted_quantile(&ends, q).unwrap_or(0.0);
         let bias = at(0.5);
         // An end that was carried out lies farther in than it seems.
-        Self { bias, minus: at(0.841_345) - bias, plus: bias - at(0.158_655) }
+        let (minus, plus) = (at(0.841_345) - bias, bias - at(0.158_655));
+        // Few lines reach that far: the tail is at least a Gaussian's.
+        let (minus95, plus95) =
+            ((at(0.975) - bias).max(1.96 * minus), (bias - at(0.025)).max(1.96 * plus));
+        Self { bias, minus, plus, minus95, plus95 }
     }
 
     /// 1σ, the mean of both sides.

@@ -17,6 +17,8 @@ pub struct End {
     /// Half the distance by which the beam alone carries the contour beyond an unresolved
     /// feature as bright as the one nearest to this end.
     pub reach: f64,
+    /// How unsure that is: another feature as near would give another reach.
+    pub reach_sigma: f64,
     /// How noise moves the contour's outermost point there.
     pub wander: Wander,
 }
@@ -124,19 +126,30 @@ impl Outline<'_> {
         let fwhm = self.beam.reach_along(direction_deg);
         let ends = [0, 1].map(|k| {
             let pixel = points[k];
-            let peak = self
-                .peaks
-                .iter()
-                .min_by(|a, b| {
-                    let distance = |p: &Pixel| self.frame.separation(*p, pixel);
-                    distance(&a.0).total_cmp(&distance(&b.0))
-                })
-                .map_or(self.level, |p| p.1);
+            let (reach, reach_sigma) = self.reach(pixel, fwhm);
             let outward_deg = direction_deg + if k == 0 { 180.0 } else { 0.0 };
             let wander = self.wander(pixel, outward_deg, |p| behind(k, p));
-            End { pixel, reach: beam_reach(peak, self.level, fwhm), wander }
+            End { pixel, reach, reach_sigma, wander }
         });
         Extent { raw_length, direction_deg, ends }
+    }
+
+    /// The beam's reach at an end, from the feature nearest to it. How unsure it is follows from
+    /// the second nearest, which counts the more the less farther it is, in beams.
+    fn reach(&self, end: Pixel, fwhm: f64) -> (f64, f64) {
+        let mut near: Vec<(f64, f64)> =
+            self.peaks.iter().map(|p| (self.frame.separation(p.0, end), p.1)).collect();
+        near.sort_by(|a, b| a.0.total_cmp(&b.0));
+        let of = |peak: f64| beam_reach(peak, self.level, fwhm);
+        match near.as_slice() {
+            [] => (0.0, 0.0),
+            [only] => (of(only.1), 0.0),
+            [first, second, ..] => {
+                let farther = (second.0 - first.0) / self.beam.mean_fwhm();
+                let share = 0.5 * (-farther * farther).exp();
+                (of(first.1), (share * (1.0 - share)).sqrt() * (of(first.1) - of(second.1)).abs())
+            }
+        }
     }
 
     /// How noise moves the outermost point of the contour near one of its points.
@@ -239,14 +252,22 @@ impl Extent {
         (a.minus.hypot(b.minus), a.plus.hypot(b.plus))
     }
 
+    /// A length of this extent with its intervals, and one more error in quadrature.
+    fn with_errors(&self, value: f64, more: f64) -> Measurement {
+        let (minus, plus) = self.sigma();
+        let [a, b] = self.ends.map(|end| end.wander);
+        let (low, high) = (a.minus95.hypot(b.minus95), a.plus95.hypot(b.plus95));
+        Measurement::value(value, minus.hypot(more), plus.hypot(more))
+            .with_ci95(value - low.hypot(1.96 * more), value + high.hypot(1.96 * more))
+    }
+
     /// The length with its error; a lower limit where the contour is cut off.
     pub fn size(&self, cut_off: bool, confidence: f64) -> Measurement {
         if cut_off {
             let least = self.length() - normal_deviate(confidence) * self.sigma().0;
             Measurement::lower_limit(least, confidence)
         } else {
-            let (minus, plus) = self.sigma();
-            Measurement::value(self.length(), minus, plus)
+            self.with_errors(self.length(), 0.0)
         }
     }
 
@@ -259,13 +280,16 @@ impl Extent {
         confidence: f64,
         z: f64,
     ) -> Measurement {
-        let value = self.length() - self.ends[0].reach - self.ends[1].reach;
+        let [a, b] = &self.ends;
+        let value = self.length() - a.reach - b.reach;
+        let unsure = a.reach_sigma.hypot(b.reach_sigma);
         let (minus, plus) = self.sigma();
+        let (minus, plus) = (minus.hypot(unsure), plus.hypot(unsure));
         if cut_off {
             return Measurement::lower_limit((value - z * minus).max(0.0), confidence);
         }
         if value > resolution.max(3.0 * minus) {
-            Measurement::value(value, minus, plus)
+            self.with_errors(value, unsure)
         } else {
             Measurement::upper_limit((value.max(0.0) + z * plus).max(resolution), confidence)
         }

@@ -16,10 +16,15 @@ pub(super) struct Extents {
     pub(super) axial_ratio: Measurement,
 }
 
+/// Signal-to-noise of a maximum that counts as a feature.
+const LEAST_PEAK: f64 = 5.0;
+
 /// Calls `f` with what extents are measured on.
 pub(super) fn with_outline<T>(findings: &Findings, f: impl FnOnce(&Outline) -> T) -> T {
     let model = findings.model;
-    let peaks: Vec<(Pixel, f64)> = model.peaks.iter().map(|p| (p.pixel, p.value)).collect();
+    // Fainter maxima are as often the noise's.
+    let detected = model.peaks.iter().filter(|p| p.signal_to_noise >= LEAST_PEAK);
+    let peaks: Vec<(Pixel, f64)> = detected.map(|p| (p.pixel, p.value)).collect();
     f(&Outline {
         window: &model.window,
         frame: &model.frame,

@@ -119,7 +119,11 @@ pub(super) fn side_size(findings: &Findings, k: usize) -> (Measurement, Measurem
     let wander = extent.ends[1].wander;
     let length = (offset.radius() - wander.bias).max(0.0);
     let core = model.core.position_sigma;
-    let size = Measurement::value(length, wander.minus.hypot(core), wander.plus.hypot(core));
+    let size = Measurement::value(length, wander.minus.hypot(core), wander.plus.hypot(core))
+        .with_ci95(
+            length - wander.minus95.hypot(1.96 * core),
+            length + wander.plus95.hypot(1.96 * core),
+        );
     if model.side_cut[k] {
         let least = length - normal_deviate(settings.confidence) * wander.minus.hypot(core);
         let size = Measurement::lower_limit(least, settings.confidence);

@@ -123,6 +123,16 @@ pub struct Truth {
     pub observation: Observation,
     /// The side of the source behind each entry of `sides`.
     pub order: [usize; 2],
+    /// The crest of each side of the source: places and brightness.
+    crests: [Vec<CrestPoint>; 2],
+}
+
+/// A place on a crest.
+#[derive(Clone, Copy, Debug, PartialEq)]
+struct CrestPoint {
+    offset: SkyOffset,
+    /// Brightness there without the core, mJy/beam.
+    brightness: f64,
 }
 
 /// Sampled points of the two paths, to tell which is nearer.
@@ -178,14 +188,15 @@ pub fn truth(source: TwinSource, observation: Observation, made: &TruthInput) ->
     let level = Settings::default().outline_sigma * made.rms_mjy_per_beam;
     let outline = outline(&observation, made.whole, level, made.rms_mjy_per_beam);
     let aperture = nominal_aperture(&source, &observation, made.parameters);
-    let mut truth = Truth { values: Values::default(), source, observation, order: [0, 1] };
-    let crests = [0, 1].map(|side| truth.crest(side, level));
+    let crests = [Vec::new(), Vec::new()];
+    let mut truth = Truth { values: Values::default(), source, observation, order: [0, 1], crests };
+    truth.crests = [0, 1].map(|side| truth.crest(side, level));
     // Where a side ends: its hot spot, else its crest.
     let ends = [0, 1].map(|side| {
         if made.parameters.hotspots.flux_density_mjy > 0.0 {
             Some(truth.source.paths[side].at(truth.source.arms_arcsec[side]).0)
         } else {
-            crests[side].last().copied()
+            truth.crests[side].last().map(|point| point.offset)
         }
     });
     truth.order = truth.roles(ends);
@@ -193,7 +204,7 @@ pub fn truth(source: TwinSource, observation: Observation, made: &TruthInput) ->
     truth.put_whole(made, outline.as_ref(), level);
     truth.put_shape(made, ends, outline.as_ref(), &nearer, level);
     for (index, side) in truth.order.into_iter().enumerate() {
-        truth.put_side(index, side, made, ends[side], &crests[side]);
+        truth.put_side(index, side, made, ends[side]);
     }
     if let Some(aperture) = aperture {
         truth.put_strips(aperture);
@@ -330,7 +341,7 @@ impl Truth {
     /// It is followed outwards on circles about the core, from the jet's own bearing at one beam:
     /// on each circle uphill from the place before to the nearest maximum. Where it falls below
     /// the level it is followed on as far as the source reaches, and counts again if it rises.
-    fn crest(&self, side: usize, level: f64) -> Vec<SkyOffset> {
+    fn crest(&self, side: usize, level: f64) -> Vec<CrestPoint> {
         let observation = &self.observation;
         let beam = observation.beam.minor;
         let path = &self.source.paths[side];
@@ -346,7 +357,7 @@ impl Truth {
         let circles = ((farthest / step).ceil() as usize).min(4000);
         let start = path.reaching(observation.beam.major).unwrap_or(path.length_arcsec);
         let mut bearing_deg = path.at(start).0.position_angle_deg();
-        let mut points: Vec<SkyOffset> = Vec::new();
+        let mut points: Vec<CrestPoint> = Vec::new();
         let (mut last, mut previous) = (0, f64::NEG_INFINITY);
         for circle in 1..=circles {
             let radius = circle as f64 * step;
@@ -365,14 +376,15 @@ impl Truth {
                 }
             }
             let brightness = at(bearing_deg);
-            let place = SkyOffset::polar(radius, bearing_deg);
+            let place = CrestPoint { offset: SkyOffset::polar(radius, bearing_deg), brightness };
             if brightness >= level {
                 points.push(place);
                 last = points.len();
             } else if previous >= level {
                 // The end proper, between this circle and the one before.
                 let back = step * (level - brightness) / (previous - brightness);
-                points.push(SkyOffset::polar(radius - back, bearing_deg));
+                let offset = SkyOffset::polar(radius - back, bearing_deg);
+                points.push(CrestPoint { offset, brightness: level });
                 last = points.len();
             } else {
                 points.push(place);
@@ -538,14 +550,7 @@ impl Truth {
         }
     }
 
-    fn put_side(
-        &mut self,
-        index: usize,
-        side: usize,
-        made: &TruthInput,
-        end: Option<SkyOffset>,
-        crest: &[SkyOffset],
-    ) {
+    fn put_side(&mut self, index: usize, side: usize, made: &TruthInput, end: Option<SkyOffset>) {
         let p = made.parameters;
         let path = self.source.paths[side].clone();
         let beam_major = self.observation.beam.major;
@@ -556,20 +561,17 @@ impl Truth {
             (false, 0) => "first",
             (false, _) => "second",
         };
-        let inner_deg = path.reaching(2.0 * beam_major).map(|t| path.at(t).0.position_angle_deg());
+        let inner = self.crests[side].iter().find(|p| p.offset.radius() >= 2.0 * beam_major);
+        let inner_deg = inner.map(|p| p.offset.position_angle_deg());
         let flux = self.side_flux_mjy(side);
         let hotspot_flux = self.source.flux_of_mjy(Part::Hotspot, Some(side));
         let hotspot = (hotspot_flux > 0.0).then(|| path.at(self.source.arms_arcsec[side]).0);
         let hotspot_peak = hotspot.map(|at| self.observation.brightness_at(&self.source.parts, at));
         let frame = self.observation.frame;
-        let ridge_length = crest.last().map(|_| {
-            let mut previous = SkyOffset::default();
-            let mut steps = crest.iter().map(|&place| {
-                let step = place.minus(previous).radius();
-                previous = place;
-                step
-            });
-            steps.by_ref().sum::<f64>()
+        let ridge_length = (!self.crests[side].is_empty()).then(|| {
+            let places = self.crests[side].iter().map(|point| point.offset);
+            let starts = std::iter::once(SkyOffset::default()).chain(places.clone());
+            places.zip(starts).map(|(to, from)| to.minus(from).radius()).sum::<f64>()
         });
         let values = &mut self.values;
         values.value(&key("role"), json!(role));
@@ -638,22 +640,19 @@ impl Truth {
             .sum()
     }
 
-    /// Bearing of a side's jet (an index of `sides`) inside the strips, weighted by flux.
+    /// Bearing of a side's crest (an index of `sides`) inside the strips, weighted by
+    /// brightness.
     pub fn strip_bearing_deg(&self, index: usize, aperture: &Aperture) -> Option<f64> {
-        let side = self.order[index.min(1)];
-        let pieces: Vec<(f64, f64)> = self
-            .jet_pieces(side)
-            .map(|piece| {
-                let weight = piece.flux_mjy * self.inside(piece, aperture);
-                (piece.offset.position_angle_deg(), weight)
-            })
-            .filter(|(_, weight)| *weight > 0.0)
-            .collect();
-        let (first, _) = *pieces.iter().max_by(|a, b| a.1.total_cmp(&b.1))?;
-        let sum: f64 = pieces.iter().map(|p| p.1).sum();
-        let turn: f64 =
-            pieces.iter().map(|p| p.1 * wrap_difference_deg(p.0 - first)).sum::<f64>() / sum;
-        Some(wrap_directed_deg(first + turn))
+        let strip = aperture.inner_arcsec..aperture.outer_arcsec;
+        let points = || {
+            let crest = self.crests[self.order[index.min(1)]].iter();
+            crest.filter(|p| strip.contains(&p.offset.radius()))
+        };
+        let first = points().next()?.offset.position_angle_deg();
+        let sum: f64 = points().map(|p| p.brightness).sum();
+        let turn = |p: &CrestPoint| wrap_difference_deg(p.offset.position_angle_deg() - first);
+        let turned: f64 = points().map(|p| p.brightness * turn(p)).sum();
+        Some(wrap_directed_deg(first + turned / sum))
     }
 
     fn put_strips(&mut self, aperture: Aperture) {

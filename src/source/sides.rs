@@ -169,14 +169,17 @@ fn hotspot(input: &FeatureInput, ridge: &Ridge, peaks: &[(Peak, SkyOffset)]) -> 
     let (peak, offset) = of_brightness(HOTSPOT_BRIGHTNESS)
         .find(|p| is_compact_end(input, &p.0, p.1))
         .or_else(|| of_brightness(LOBE_BRIGHTNESS).find(|p| is_lobe(input, ridge, &p.0, p.1)))?;
-    Some(placed(input, peak, *offset))
+    Some(placed(input, ridge, peak, *offset))
 }
 
 /// A hot spot at a local maximum, freed from the pull of what it stands in.
-fn placed(input: &FeatureInput, peak: &Peak, offset: SkyOffset) -> Feature {
+fn placed(input: &FeatureInput, ridge: &Ridge, peak: &Peak, offset: SkyOffset) -> Feature {
     let FeatureInput { window, beam, frame, noise, .. } = *input;
     let outward_deg = offset.position_angle_deg();
-    let fit = fit_spot(window, peak.pixel, outward_deg + 180.0, beam, frame, noise);
+    // The jet comes along the ridge.
+    let inside = (offset.radius() - 1.5 * beam.major).max(0.0);
+    let jet = SkyOffset::polar(inside, ridge.bearing_at(inside)).minus(offset);
+    let fit = fit_spot(window, peak.pixel, jet.position_angle_deg(), beam, frame, noise);
     let (pixel, value, covariance, brightness_sigma) = match fit {
         Some(spot) => {
             // A maximum too broad for a beam-shaped component is where it seems to be.
@@ -235,10 +238,10 @@ impl Surroundings {
         }
     }
 
-    /// Whether both have fallen to a share; two rms are allowed for the highest of the few
+    /// Whether both have fallen to a share; one rms is allowed for the highest of the few
     /// places looked at.
     fn fallen_to(&self, share: f64) -> bool {
-        self.outward - 2.0 * self.rms <= share && self.around <= share
+        self.outward - self.rms <= share && self.around <= share
     }
 }
 

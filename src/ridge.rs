@@ -141,7 +141,8 @@ impl Ridge {
     ///
     /// Chords of a beam's length join the points that stand above the threshold, straight over
     /// gaps between them. Noise that moves points aside lengthens each chord c by s²/c on the
-    /// mean (s: 1σ of a point across the ridge), which is taken off. How sure the path is
+    /// mean (s: 1σ of a point across the ridge, bounded by how far crests are looked for), which
+    /// is taken off. How sure the path is
     /// follows from chords three times as long: a path that winds within a few beams is told
     /// from one that wanders with noise or between several crests only as well as the two agree.
     pub fn length(&self, beam: f64, threshold: f64) -> Option<(f64, f64, f64)> {
@@ -163,7 +164,7 @@ impl Ridge {
             let step = point.offset.minus(previous).radius();
             if step >= least {
                 sum += step;
-                noise += point.aside_sigma().powi(2) / step;
+                noise += point.aside_sigma().min(CREST_REACH * point.beam_width).powi(2) / step;
                 previous = point.offset;
             }
         }
@@ -544,6 +545,9 @@ fn crest_points(
     (points, end)
 }
 
+/// A point's crest is looked for within 0.6 beams of the path and averaged over a beam: its
+/// scatter is no more than this many beams.
+const CREST_REACH: f64 = 0.2;
 /// Beams inside a ridge's last point from which on its end is looked for.
 const END_BEAMS: f64 = 3.0;
 
@@ -568,8 +572,11 @@ fn ridge_end(
         .iter()
         .map(|p| {
             let raised = (0.25 * ratio * ratio / p.signal_to_noise().max(1.0)).min(1.0);
-            let level = context.outline_sigma + raised;
-            ProfilePoint { distance: p.distance, excess: p.brightness - level * p.rms, rms: p.rms }
+            let excess = p.brightness - (context.outline_sigma + raised) * p.rms;
+            // What stands higher beyond the last point is no crest of this source.
+            let is_foreign = p.distance > last.distance && excess > 0.0;
+            let excess = if is_foreign { -p.rms } else { excess };
+            ProfilePoint { distance: p.distance, excess, rms: p.rms }
         })
         .collect();
     let along_beam = beam.reach_along(direction);

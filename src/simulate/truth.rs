@@ -568,10 +568,20 @@ impl Truth {
         let hotspot = (hotspot_flux > 0.0).then(|| path.at(self.source.arms_arcsec[side]).0);
         let hotspot_peak = hotspot.map(|at| self.observation.brightness_at(&self.source.parts, at));
         let frame = self.observation.frame;
-        let ridge_length = (!self.crests[side].is_empty()).then(|| {
-            let places = self.crests[side].iter().map(|point| point.offset);
-            let starts = std::iter::once(SkyOffset::default()).chain(places.clone());
-            places.zip(starts).map(|(to, from)| to.minus(from).radius()).sum::<f64>()
+        // In chords of a beam, as the record's.
+        let chord = self.observation.beam.mean_fwhm();
+        let ridge_length = self.crests[side].last().map(|end| {
+            let mut previous = SkyOffset::default();
+            let inside = end.offset.radius() - chord;
+            let mut sum = 0.0;
+            for point in self.crests[side].iter().filter(|p| p.offset.radius() < inside) {
+                let step = point.offset.minus(previous).radius();
+                if step >= chord {
+                    sum += step;
+                    previous = point.offset;
+                }
+            }
+            sum + end.offset.minus(previous).radius()
         });
         let values = &mut self.values;
         values.value(&key("role"), json!(role));

@@ -250,7 +250,7 @@ pub fn assemble(findings: &Findings, mut flags: Vec<Flag>) -> MapRecord {
         hotspot_separation_arcsec: units.arcsec(arms.hotspot_separation),
         fr_ratio: fr.whole,
         fr_ratio_deconvolved: fr.deconvolved,
-        fr_class: classify(fr.deconvolved, beams),
+        fr_class: classify(fr.of_regions, beams),
         arm_length_ratio: arms.folded,
         arm_length_ratio_basis: arms.basis,
         longer_arm: OrMissing::from_option(arms.longer.map(|k| order.role[k]), arms.because),

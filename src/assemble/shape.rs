@@ -270,6 +270,10 @@ pub(super) fn symmetry(bends_deg: [Measurement; 2]) -> OrMissing<Symmetry> {
 pub(super) struct FrRatios {
     pub(super) whole: Measurement,
     pub(super) deconvolved: Measurement,
+    /// Over the deconvolved size, for the class: between the *regions* of highest brightness
+    /// (Fanaroff & Riley 1974), which on a side that fades from the core lie where the search
+    /// begins and not at a faint maximum farther out.
+    pub(super) of_regions: Measurement,
 }
 
 /// Distance of the brightest points over the size. A side on which no peak stands out beyond
@@ -284,14 +288,14 @@ pub(super) fn fr_ratios(
     let missing = |because| FrRatios {
         whole: Measurement::missing(because),
         deconvolved: Measurement::missing(because),
+        of_regions: Measurement::missing(because),
     };
-    let Some((_, features)) = &findings.model.sides else { return missing(Because::NoCore) };
+    let Some((ridges, features)) = &findings.model.sides else { return missing(Because::NoCore) };
     if findings.model.cut_off {
         // What lies beyond the edge may be brighter.
         return missing(Because::LeavesMap);
     }
     let nearest = BRIGHTEST_BEYOND_BEAMS * findings.observed.working_beam.major;
-    let [a, b] = order.map(|k| &features[k]);
     let bound = |k: usize| features[k].falls_from.max(nearest);
     let chord = |f: &Feature, g: &Feature| {
         let chord = g.offset.minus(f.offset);
@@ -299,18 +303,32 @@ pub(super) fn fr_ratios(
         (chord.radius(), f.sigma_along(pa_deg).hypot(g.sigma_along(pa_deg)))
     };
     let core = findings.model.core.position_sigma;
-    let one = |f: &Feature, other: usize| {
+    let one = |f: &Feature, other: f64| {
         let sigma = f.sigma_along(f.offset.position_angle_deg()).hypot(core);
-        (f.distance() + normal_deviate(findings.settings.confidence) * sigma + bound(other), 0.0)
+        (f.distance() + normal_deviate(findings.settings.confidence) * sigma + other, 0.0)
     };
-    let ((distance, sigma), monotonic) = match (&a.brightest, &b.brightest) {
-        (Some(f), Some(g)) => (chord(f, g), false),
-        (Some(f), None) => (one(f, order[1]), true),
-        (None, Some(g)) => (one(g, order[0]), true),
-        (None, None) => ((bound(order[0]) + bound(order[1]), 0.0), true),
+    let over = |points: [Option<&Feature>; 2], bounds: [f64; 2], size: Measurement| {
+        let ((distance, sigma), monotonic) = match points {
+            [Some(f), Some(g)] => (chord(f, g), false),
+            [Some(f), None] => (one(f, bounds[1]), true),
+            [None, Some(g)] => (one(g, bounds[0]), true),
+            [None, None] => ((bounds[0] + bounds[1], 0.0), true),
+        };
+        over_size(distance, sigma, size, monotonic, findings)
     };
-    let over = |size: Measurement| over_size(distance, sigma, size, monotonic, findings);
-    FrRatios { whole: over(size), deconvolved: over(deconvolved) }
+    let peaks = order.map(|k| features[k].brightest.as_ref());
+    // A side whose ridge is brighter where the search begins than at any peak beyond is
+    // brightest there.
+    let regions = order.map(|k| {
+        let start = ridges[k].points.iter().find(|p| p.distance >= nearest);
+        let start = start.map_or(0.0, |p| p.brightness);
+        features[k].brightest.as_ref().filter(|f| f.peak.value > start)
+    });
+    FrRatios {
+        whole: over(peaks, order.map(bound), size),
+        deconvolved: over(peaks, order.map(bound), deconvolved),
+        of_regions: over(regions, [nearest; 2], deconvolved),
+    }
 }
 
 /// A distance over a size: a value, or an upper limit where the distance is one.

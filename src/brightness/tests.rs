@@ -145,7 +145,7 @@ fn gaussian(across: f64, fwhm: f64) -> f64 {
 }
 
 fn straight(deg: f64) -> Ridge {
-    Ridge { start_deg: deg, detected: false, points: Vec::new() }
+    Ridge { start_deg: deg, detected: false, points: Vec::new(), end: None }
 }
 
 fn placed() -> PlacedStrip {

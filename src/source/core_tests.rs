@@ -70,11 +70,12 @@ fn ridge(bearing_deg: f64) -> Ridge {
             offset: SkyOffset::polar(f64::from(k), bearing_deg),
             brightness: 1.0,
             rms: 0.1,
+            beam_width: 1.0,
             width: Measurement::missing(Because::Unresolved),
             width_deconvolved: Measurement::missing(Because::Unresolved),
         })
         .collect();
-    Ridge { start_deg: bearing_deg, detected: true, points }
+    Ridge { start_deg: bearing_deg, detected: true, points, end: None }
 }
 
 /// Points that make a jet of a brightness (on its ridge, as a function of the distance) from the

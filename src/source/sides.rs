@@ -238,10 +238,10 @@ impl Surroundings {
         }
     }
 
-    /// Whether both have fallen to a share; one rms is allowed for the highest of the few
+    /// Whether both have fallen to a share; one and a half rms are allowed for the highest of the few
     /// places looked at.
     fn fallen_to(&self, share: f64) -> bool {
-        self.outward - self.rms <= share && self.around <= share
+        self.outward - 1.5 * self.rms <= share && self.around <= share
     }
 }
 

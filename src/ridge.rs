@@ -35,6 +35,8 @@ pub struct RidgePoint {
     pub width_deconvolved: Measurement,
     /// The beam's projected width there.
     pub beam_width: f64,
+    /// Share of the width's 1σ that comes from the diffuse emission under the ridge, sky units.
+    pub width_model: f64,
 }
 
 impl RidgePoint {
@@ -118,28 +120,31 @@ impl Ridge {
     /// from one that wanders with noise or between several crests only as well as the two agree.
     pub fn length(&self, beam: f64, threshold: f64) -> Option<(f64, f64, f64)> {
         let end = self.end.as_ref()?;
-        let (fine, noise) = self.chords(end.offset, beam, threshold);
-        let (coarse, _) = self.chords(end.offset, 3.0 * beam, threshold);
-        let path = noise.hypot(0.5 * (fine - noise - coarse));
+        let (fine, noise, unsure) = self.chords(end.offset, beam, threshold);
+        let (coarse, ..) = self.chords(end.offset, 3.0 * beam, threshold);
+        let path = unsure.hypot(0.5 * (fine - noise - coarse));
         let length = (fine - noise).max(end.offset.radius());
         Some((length, end.along.minus.hypot(path), end.along.plus.hypot(path)))
     }
 
-    /// Sum of chords of at least a length, and what noise adds to it on the mean.
-    fn chords(&self, end: SkyOffset, least: f64, threshold: f64) -> (f64, f64) {
+    /// Sum of chords of at least a length, what noise adds to it on the mean, and how unsure
+    /// that is: half of what it would add if crests were looked for without bound.
+    fn chords(&self, end: SkyOffset, least: f64, threshold: f64) -> (f64, f64, f64) {
         let mut previous = SkyOffset::default();
-        let (mut sum, mut noise) = (0.0, 0.0);
+        let (mut sum, mut noise, mut unsure) = (0.0, 0.0, 0.0);
         let inside = end.radius() - least;
         let bright = |p: &&RidgePoint| p.signal_to_noise() >= threshold;
         for point in self.points.iter().filter(bright).filter(|p| p.distance < inside) {
             let step = point.offset.minus(previous).radius();
             if step >= least {
                 sum += step;
-                noise += point.aside_sigma().min(CREST_REACH * point.beam_width).powi(2) / step;
+                let aside = point.aside_sigma();
+                noise += aside.min(CREST_REACH * point.beam_width).powi(2) / step;
+                unsure += 0.5 * aside * aside / step;
                 previous = point.offset;
             }
         }
-        (sum + end.minus(previous).radius(), noise)
+        (sum + end.minus(previous).radius(), noise, unsure)
     }
 }
 
@@ -172,8 +177,11 @@ impl Ridge {
             let Measurement::Value { value: width, minus, .. } = point.width else { continue };
             let area = point.distance * point.distance;
             squares.push((width * width - point.beam_width * point.beam_width) / area);
-            variance += (2.0 * width * minus / area).powi(2);
-            share += 2.0 * WIDTH_SHARE * point.beam_width * point.beam_width / area;
+            let noise = (minus * minus - point.width_model * point.width_model).max(0.0).sqrt();
+            variance += (2.0 * width * noise / area).powi(2);
+            // What all points have in common does not average out.
+            let common = (WIDTH_SHARE * point.beam_width).hypot(point.width_model);
+            share += 2.0 * width * common / area;
         }
         let count = squares.len() as f64;
         let Some(square) = median(&mut squares).filter(|_| squares.len() >= LEAST_WIDTHS) else {
@@ -501,15 +509,17 @@ fn crest_points(
             width: Measurement::missing(Because::Unresolved),
             width_deconvolved: Measurement::missing(Because::Unresolved),
             beam_width: beam.mean_fwhm(),
+            width_model: 0.0,
         });
     }
     let profile = points.clone();
     points.truncate(last);
     for k in 0..points.len() {
         let direction = local_direction(&points, k);
-        let (width, deconvolved) = transverse_width(window, context, &points[k], direction);
+        let (width, deconvolved, model) = transverse_width(window, context, &points[k], direction);
         points[k].width = width;
         points[k].width_deconvolved = deconvolved;
+        points[k].width_model = model;
         points[k].beam_width = context.beam.projected_fwhm(direction);
     }
     let end = ridge_end(&points, &profile, context);
@@ -621,11 +631,17 @@ fn local_direction(points: &[RidgePoint], k: usize) -> f64 {
     if chord.radius() > 0.0 { chord.position_angle_deg() } else { points[k].bearing_deg }
 }
 
+/// Where the emission beside a ridge is looked at, in widths: there a Gaussian ridge itself is
+/// down to 1 % and less.
+const BASE_WIDTHS: (f64, f64) = (1.3, 1.8);
+/// No more than this share of a crest is taken for diffuse emission.
+const MOST_BASE: f64 = 0.7;
+
 /// FWHM of the transverse profile from its half-maximum crossings, and the same with the
 /// beam's projected width taken off in quadrature. Missing where the profile does not fall
 /// to half on both sides within three beams, or the crest is below 5σ. Diffuse emission under
-/// the ridge is taken off: the lower of the two brightnesses 1.5 widths aside, where it stands
-/// 2 rms high; half of what that changes counts as an error, since it need not be flat.
+/// the ridge is taken off: the mean brightness beside it, carried under it by a parabola, where it
+/// stands 2 rms high; half of what that changes counts as an error, the third number.
 ///
 /// Error: a crossing moves by (rms / slope); the slope of a Gaussian at half maximum is
 /// peak × 4 ln 2 / (2 FWHM) × 2 = peak × 1.386 / FWHM, so that both crossings together give
@@ -635,13 +651,14 @@ fn transverse_width(
     context: &RidgeContext,
     point: &RidgePoint,
     direction_deg: f64,
-) -> (Measurement, Measurement) {
+) -> (Measurement, Measurement, f64) {
     let missing = Measurement::missing(Because::Unresolved);
     let signal = point.signal_to_noise();
     if signal < 5.0 {
         return (
             Measurement::missing(Because::JetNotDetected),
             Measurement::missing(Because::JetNotDetected),
+            0.0,
         );
     }
     let step = 0.1 * context.beam.minor;
@@ -668,13 +685,26 @@ fn transverse_width(
         let half = 0.5 * (point.brightness + base);
         Some(crossing(-1.0, half)? + crossing(1.0, half)?)
     };
-    let Some(raw) = between(0.0) else { return (missing, missing) };
-    // Diffuse emission under the ridge, as bright as beside it: above the noise on both sides.
-    let base = beside(-1.5 * raw).zip(beside(1.5 * raw)).map_or(0.0, |(a, b)| a.min(b));
-    let base = if base > 2.0 * point.rms { base } else { 0.0 };
-    let width = between(base).unwrap_or(raw);
+    let Some(raw) = between(0.0) else { return (missing, missing, 0.0) };
+    // Diffuse emission under the ridge: a parabola through its brightness beside it.
+    let mean = |aside: f64| Some(0.5 * (beside(-aside)? + beside(aside)?));
+    let (mut width, mut base) = (raw, 0.0);
+    for _ in 0..2 {
+        let (Some(near), Some(far)) = (mean(BASE_WIDTHS.0 * width), mean(BASE_WIDTHS.1 * width))
+        else {
+            break;
+        };
+        if near < 2.0 * point.rms {
+            break;
+        }
+        let (a, b) = (BASE_WIDTHS.0.powi(2), BASE_WIDTHS.1.powi(2));
+        let under = (near + (near - far).max(0.0) * a / (b - a)).min(MOST_BASE * point.brightness);
+        let Some(narrower) = between(under) else { return (missing, missing, 0.0) };
+        (width, base) = (narrower, under);
+    }
+    let model = 0.5 * (raw - width).abs();
     let noise = 1.02 * width / signal * point.brightness / (point.brightness - base);
-    let sigma = noise.hypot(0.5 * (raw - width));
+    let sigma = noise.hypot(model);
     let beam_width = context.beam.projected_fwhm(direction_deg);
     let square = width * width - beam_width * beam_width;
     let square_sigma = 2.0 * width * sigma;
@@ -685,7 +715,7 @@ fn transverse_width(
         let z = context.z_confidence;
         Measurement::upper_limit((square.max(0.0) + z * square_sigma).sqrt(), normal_probability(z))
     };
-    (Measurement::symmetric(width, sigma), deconvolved)
+    (Measurement::symmetric(width, sigma), deconvolved, model)
 }
 
 #[cfg(test)]

@@ -728,7 +728,7 @@ fn transverse_width(
         }
         let (a, b) = (BASE_WIDTHS.0.powi(2), BASE_WIDTHS.1.powi(2));
         let under = (near + (near - far).max(0.0) * a / (b - a)).min(MOST_BASE * point.brightness);
-        let Some(narrower) = between(under) else { break };
+        let Some(narrower) = between(under) else { return (missing, missing, 0.0) };
         (width, base) = (narrower, under);
     }
     let model = 0.5 * (raw - width).abs();

@@ -53,13 +53,15 @@ pub struct SideFeatures {
 /// A hot spot is at least this bright against the side's brightest peak: knots may outshine
 /// it, but a speck at the end of a fading jet is none.
 const HOTSPOT_BRIGHTNESS: f64 = 0.25;
-/// At this many beams from a hot spot the brightness has fallen to this share of its, either
-/// of the two pairs: the median all around (what is wider than about two beams is a lobe's or
-/// plume's maximum), and the highest outwards (a jet or plume that goes on is brighter). Hot
-/// spots exceed their surroundings four times and lie at the end of the jet (two criteria of
-/// Bridle et al. 1994, AJ 108, 766, from memory; their third, a twentieth of the source's size,
-/// is not resolved by most maps).
-const HOTSPOT_FALL: [(f64, f64); 2] = [(1.5, 0.25), (2.0, 0.15)];
+/// At this many beams from a hot spot the brightness has fallen to this share of its: the
+/// median all around (what is wider than about two beams is a lobe's or plume's maximum), and
+/// the highest outwards (a jet or plume that goes on is brighter). Hot spots exceed their
+/// surroundings four times and lie at the end of the jet (two criteria of Bridle et al. 1994,
+/// AJ 108, 766, from memory; their third, a twentieth of the source's size, is not resolved by
+/// most maps).
+const HOTSPOT_FALL: (f64, f64) = (1.5, 0.25);
+/// The same for one too wide for that, and wider than a bump in a jet.
+const WIDE_FALL: (f64, f64) = (2.0, 0.15);
 /// At how many places surroundings are compared, and how far from the direction away from the
 /// core a place counts as outward.
 const SURROUNDINGS_PLACES: u32 = 24;
@@ -247,9 +249,10 @@ impl Surroundings {
 
 /// Whether a peak is compact and nothing as bright goes on beyond it.
 fn is_compact_end(input: &FeatureInput, peak: &Peak, offset: SkyOffset) -> bool {
-    HOTSPOT_FALL.iter().any(|&(beams, share)| {
-        Surroundings::of(input, peak, offset.position_angle_deg(), beams).fallen_to(share)
-    })
+    let at = |beams| Surroundings::of(input, peak, offset.position_angle_deg(), beams);
+    let near = at(HOTSPOT_FALL.0);
+    near.fallen_to(HOTSPOT_FALL.1)
+        || near.around >= LOBE_WIDTH.1 && at(WIDE_FALL.0).fallen_to(WIDE_FALL.1)
 }
 
 /// Whether a peak is the head of a lobe: wider than a jet, falling off beyond it, in the outer

@@ -71,6 +71,7 @@ fn ridge(bearing_deg: f64) -> Ridge {
             brightness: 1.0,
             rms: 0.1,
             beam_width: 1.0,
+            width_model: 0.0,
             width: Measurement::missing(Because::Unresolved),
             width_deconvolved: Measurement::missing(Because::Unresolved),
         })

@@ -241,7 +241,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "LAS",
         Angle,
         "Largest distance between two points of the source's contour. Grows with sensitivity and beam: compare only at like depth. Projection makes it a lower bound of the true length.",
-        "farthest pair of sub-pixel contour points; error = rms over the brightness gradient at both ends",
+        "farthest pair of sub-pixel contour points, without the median by which noise carries such ends out; that and the error from lines of noise along the contour, rms over the slope of the brightness there",
         PRACTICE,
     ),
     quantity(
@@ -250,7 +250,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "",
         Angle,
         "The same with each end moved in by the beam's reach there.",
-        "LAS − Σ ½ b √log₂(S/contour) over both ends, S the peak nearest to the end",
+        "LAS − Σ ½ b √log₂(S/contour) over both ends, S the peak nearest to the end; a second peak as near adds to the error",
         "own definition of the record",
     ),
     quantity(
@@ -286,7 +286,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "",
         Angle,
         "Distance between the two hot spots.",
-        "distance of the peaks' sub-pixel positions; error per peak: noise and a twentieth of the beam",
+        "distance of the fitted places (see sides[].hotspot.distance_arcsec)",
         PRACTICE,
     ),
     quantity(
@@ -294,8 +294,8 @@ pub const QUANTITIES: &[Quantity] = &[
         "",
         "",
         Unchanged,
-        "Distance between the brightest points on the two sides of the core over the largest angular size. An upper limit where a side has no peak of its own beyond 1.5 beams. Depends on beam and depth.",
-        "d / LAS, core removed",
+        "Distance between the brightest points on the two sides of the core over the largest angular size. An upper limit where on a side no peak stands out beyond 1.5 beams; missing where the source leaves the map. Depends on beam and depth.",
+        "d / LAS, core removed; peaks as bright within the noise add their distance to the error",
         "Fanaroff & Riley 1974, MNRAS 167, 31P",
     ),
     quantity(
@@ -430,7 +430,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "",
         Angle,
         "Core to the farthest point of the contour on this side; projected.",
-        "largest distance",
+        "largest distance; end and error as for source.largest_angular_size_arcsec",
         PRACTICE,
     ),
     quantity(
@@ -447,8 +447,8 @@ pub const QUANTITIES: &[Quantity] = &[
         "arcsec",
         "",
         Angle,
-        "Length along the ridge from the core to its last point.",
-        "Σ of chords",
+        "Length along the ridge from the core to where it last stands at 3 rms.",
+        "Σ of chords of one beam, without what noise adds; error: the end's along the ridge, and half the difference to chords of three beams",
         PRACTICE,
     ),
     quantity(
@@ -474,7 +474,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "",
         "",
         Unchanged,
-        "Core to brightest point over the side's length.",
+        "Core to brightest point over the side's length; upper limit where the side falls outwards, missing where it leaves the map.",
         "d/length",
         "Fanaroff & Riley 1974, MNRAS 167, 31P",
     ),
@@ -492,8 +492,8 @@ pub const QUANTITIES: &[Quantity] = &[
         "deg",
         "α_app",
         Unchanged,
-        "Apparent full opening angle, median over resolved ridge points.",
-        "2 arctan(½ √(d² − b²)/r)",
+        "Apparent full opening angle, median over the ridge's points in the strip; upper limit where the jet is not resolved.",
+        "2 arctan(½ √(median of (d² − b²)/r²)), d the width above the emission beside the ridge",
         "Pushkarev et al. 2017, MNRAS 468, 4992 (arXiv 1705.02888)",
     ),
     quantity(
@@ -502,7 +502,7 @@ pub const QUANTITIES: &[Quantity] = &[
         "k",
         Unchanged,
         "Exponent of width ∝ distance^k: 0 cylinder, ½ paraboloid, 1 cone.",
-        "fit to the deconvolved widths",
+        "slope of ln width against ln distance over resolved points in the strip, at least six over a factor 1.5",
         PRACTICE,
     ),
     quantity(
@@ -528,8 +528,8 @@ pub const QUANTITIES: &[Quantity] = &[
         "arcsec",
         "",
         Angle,
-        "Core to hot spot; projected.",
-        "distance",
+        "Core to hot spot; projected. A hot spot is the outermost peak of the side that is compact, rises from the ridge and beyond which nothing a quarter as bright goes on; else the head of an edge-brightened lobe.",
+        "mean of two fits of a beam-shaped component, on a curved base (carried to radius 0) and with a jet that ends in it; error: correlated noise and how far the answers lie apart",
         PRACTICE,
     ),
     quantity(
@@ -546,8 +546,8 @@ pub const QUANTITIES: &[Quantity] = &[
         "mJy/beam",
         "",
         Brightness,
-        "Peak of the hot spot.",
-        "sub-pixel peak",
+        "Brightness of the map at the hot spot's place.",
+        "fitted component and base together",
         PRACTICE,
     ),
     quantity(

@@ -291,7 +291,7 @@ pub struct SourceRecord {
     pub misalignment_deg: Measurement,
     /// 180° − angle hot spot–core–hot spot.
     pub bend_deg: Measurement,
-    /// From the two sides' bends.
+    /// From the two sides' bends: bends below 5° or 2σ are none.
     pub symmetry: OrMissing<Symmetry>,
     /// Length over width, both deconvolved.
     pub axial_ratio: Measurement,
@@ -320,7 +320,8 @@ pub enum Role {
 pub struct JetRecord {
     /// Whether jet emission stands above the noise in the strip (3σ).
     pub detected: bool,
-    /// Which criteria of a jet one map can test, and whether they are met.
+    /// Which criteria of a jet one map can test, and whether they are met (Bridle & Perley 1984):
+    /// `four_times_as_long_as_wide`, `separable`, `aligned_with_core`.
     pub criteria: OrMissing<BTreeMap<String, bool>>,
     /// Flux in the strip.
     pub flux_density_mjy: Measurement,
@@ -398,7 +399,7 @@ pub struct SideRecord {
     pub length_arcsec: Measurement,
     /// The same in pixels (mean scale), also where no pixel scale is known.
     pub length_px: Measurement,
-    /// Along the ridge.
+    /// Along the ridge to where it last stands at 3 rms.
     pub ridge_length_arcsec: Measurement,
     /// Projected length.
     pub length_kpc: Measurement,

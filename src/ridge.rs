@@ -847,6 +847,39 @@ mod tests {
     }
 
     #[test]
+    fn a_cone_has_its_opening_angle_and_exponent() {
+        // Width 0.3 d before the beam: 2 atan(0.15) = 17.06°, exponent 1.
+        let mut window = window(|_, _| 0.0, |_, _| 0.0, None);
+        let frame = frame();
+        for ((r, c), value) in window.brightness.indexed_iter_mut() {
+            let offset = frame.offset(Pixel::new(c as f64, r as f64));
+            let width = BEAM.hypot(0.3 * offset.north);
+            let across = (-4.0 * std::f64::consts::LN_2 * (offset.east / width).powi(2)).exp();
+            *value = if offset.north.abs() < 60.0 { 200.0 * across } else { 0.0 };
+        }
+        window.member = window.brightness.mapv(|b| b > 3.0);
+        for ridge in traced(&window) {
+            let angle = ridge.opening_angle_deg((10.0, 45.0), BEAM, 0.95);
+            let value = angle.best().expect("resolved");
+            assert!((value - 17.06).abs() < 2.0 * angle.sigma().expect("an error"), "{angle:?}");
+            assert!((value / 17.06 - 1.0).abs() < 0.05, "{value}");
+            let exponent = ridge.width_exponent((10.0, 45.0)).expect("resolved");
+            assert!((exponent - 1.0).abs() < 0.1, "{exponent}");
+            // Too short a span for an exponent.
+            assert!(ridge.width_exponent((30.0, 40.0)).is_none());
+        }
+    }
+
+    #[test]
+    fn an_unresolved_jet_has_an_upper_limit_only() {
+        let window = window(|side, _| 30.0 + 180.0 * side as f64, |_, _| 40.0, None);
+        for ridge in traced(&window) {
+            let angle = ridge.opening_angle_deg((10.0, 45.0), BEAM, 0.95);
+            assert!(matches!(angle, Measurement::UpperLimit { .. }), "{angle:?}");
+        }
+    }
+
+    #[test]
     fn a_bend_of_forty_degrees_is_followed() {
         let bent = |side: usize, d: f64| {
             let turn = 40.0 * ((d - 10.0) / 40.0).clamp(0.0, 1.0);

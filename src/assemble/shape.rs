@@ -360,3 +360,37 @@ pub(super) fn over_size(
         _ => Measurement::missing(Because::Unresolved),
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn symmetry_follows_the_senses_of_the_bends() {
+        let of = |a: (f64, f64), b: (f64, f64)| {
+            symmetry([Measurement::symmetric(a.0, a.1), Measurement::symmetric(b.0, b.1)])
+        };
+        let is = |s: Symmetry| OrMissing::Present(s);
+        // Both turn from north towards east: an S about the core.
+        assert_eq!(of((20.0, 2.0), (15.0, 2.0)), is(Symmetry::Inversion));
+        assert_eq!(of((20.0, 2.0), (-15.0, 2.0)), is(Symmetry::Mirror));
+        assert_eq!(of((1.0, 2.0), (-3.0, 2.0)), is(Symmetry::Straight));
+        // One bend that is sure and one that is none; and two of which nothing is known.
+        assert_eq!(of((20.0, 2.0), (1.0, 2.0)), is(Symmetry::Undecided));
+        assert_eq!(of((10.0, 20.0), (5.0, 20.0)), is(Symmetry::Undecided));
+        let none = Measurement::missing(Because::JetNotDetected);
+        let one = symmetry([Measurement::symmetric(20.0, 1.0), none]);
+        assert_eq!(one, OrMissing::missing(Because::JetNotDetected));
+    }
+
+    #[test]
+    fn a_folded_quantity_does_not_reach_below_its_least_value() {
+        match at_least(Measurement::symmetric(1.05, 0.2), 1.0) {
+            Measurement::Value { minus, plus, ci95: Some([low, high]), .. } => {
+                assert!((minus - 0.05).abs() < 1e-12 && (plus - 0.2).abs() < 1e-12);
+                assert!((low - 1.0).abs() < 1e-12 && (high - 1.442).abs() < 1e-12);
+            }
+            other => panic!("expected a value, got {other:?}"),
+        }
+    }
+}

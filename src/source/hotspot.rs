@@ -238,14 +238,9 @@ fn solve(rows: &[([f64; COLUMNS], f64)], count: usize) -> Option<([f64; COLUMNS]
     for (row, value) in rows {
         for i in 0..count {
             right[i] += row[i] * value;
-            for j in 0..=i {
+            for j in 0..count {
                 normal[i][j] += row[i] * row[j];
             }
-        }
-    }
-    for i in 0..count {
-        for j in i + 1..count {
-            normal[i][j] = normal[j][i];
         }
     }
     let inverse = invert_symmetric(&normal)?;
@@ -254,4 +249,79 @@ fn solve(rows: &[([f64; COLUMNS], f64)], count: usize) -> Option<([f64; COLUMNS]
         *value = row.iter().zip(&right).map(|(a, b)| a * b).sum();
     }
     Some((out, inverse))
+}
+
+#[cfg(test)]
+mod tests {
+    use ndarray::Array2;
+
+    use super::*;
+    use crate::map::description::{MapDescription, Rows};
+    use crate::map::geometry::SkyGeometry;
+    use crate::noise::KernelEllipse;
+
+    const SIZE: usize = 61;
+
+    /// A point of brightness 100 at (30.3, 30.2) px on a lobe of brightness 40 and FWHM 14 px
+    /// whose middle lies 5 px beside it, rms 0.1, beam 5 px.
+    fn spot_on_lobe() -> (Window, LocalFrame, Beam) {
+        let description =
+            MapDescription { pixel_scale_arcsec: Some([1.0, 1.0]), ..MapDescription::default() };
+        let frame = SkyGeometry::new(SIZE, SIZE, &description, Rows::BottomUp)
+            .local_frame(Pixel::new(30.0, 30.0));
+        let beam = Beam { major: 5.0, minor: 5.0, pa_deg: 0.0 };
+        let lobe = Beam { major: 14.0, minor: 14.0, pa_deg: 0.0 };
+        let at = |beam: &Beam, x: f64, y: f64, p: Pixel| {
+            beam.profile(frame.difference(Pixel::new(x, y), p))
+        };
+        let brightness = Array2::from_shape_fn((SIZE, SIZE), |(r, c)| {
+            let p = Pixel::new(c as f64, r as f64);
+            100.0 * at(&beam, 30.3, 30.2, p) + 40.0 * at(&lobe, 25.3, 30.2, p)
+        });
+        let window = Window {
+            x0: 0,
+            y0: 0,
+            rms: Array2::from_elem((SIZE, SIZE), 0.1),
+            member: Array2::from_elem((SIZE, SIZE), true),
+            foreign: Array2::from_elem((SIZE, SIZE), false),
+            brightness,
+        };
+        (window, frame, beam)
+    }
+
+    #[test]
+    fn the_pull_of_a_lobe_is_taken_off() {
+        let (window, frame, beam) = spot_on_lobe();
+        // The maximum itself is pulled by slope over curvature: 40 · 0.70 · 2 · 5 · 4 ln 2/14²
+        // over 100 · 8 ln 2/5² = 0.18 px.
+        let noise = Noise::uniform(SIZE, SIZE, 0.0, 0.1);
+        let kernel = KernelEllipse { major_px: 5.0, minor_px: 5.0, angle_deg: 0.0 };
+        let correlation = NoiseCorrelation::of_kernel(kernel);
+        let fit = fit_spot(
+            &window,
+            Pixel::new(30.12, 30.2),
+            frame.difference(Pixel::new(30.3, 30.2), Pixel::new(20.0, 30.2)).position_angle_deg(),
+            &beam,
+            &frame,
+            (&noise, &correlation),
+        )
+        .expect("a spot");
+        let off = fit.pixel.distance_px(Pixel::new(30.3, 30.2));
+        assert!(off < 0.03, "{off}");
+        // 100 and the lobe's 40 · 2^(−4 · 25/196) = 28.1.
+        assert!((fit.brightness / 128.1 - 1.0).abs() < 0.01, "{}", fit.brightness);
+        // What is left lies within three of its errors, and those are less than half of the pull.
+        let sigma = fit.variance_along(90.0).sqrt();
+        assert!(off < 3.0 * sigma && sigma < 0.08, "{off} {sigma}");
+    }
+
+    #[test]
+    fn nothing_is_fitted_on_a_plane() {
+        let (mut window, frame, beam) = spot_on_lobe();
+        window.brightness = Array2::from_shape_fn((SIZE, SIZE), |(_, c)| 3.0 + 0.1 * c as f64);
+        let noise = Noise::uniform(SIZE, SIZE, 0.0, 0.1);
+        let white = (&noise, &NoiseCorrelation::white());
+        let fit = fit_spot(&window, Pixel::new(30.0, 30.0), 0.0, &beam, &frame, white);
+        assert!(fit.is_none_or(|spot| spot.component < 1e-6));
+    }
 }

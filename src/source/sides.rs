@@ -62,6 +62,12 @@ const HOTSPOT_BRIGHTNESS: f64 = 0.25;
 const HOTSPOT_FALL: (f64, f64) = (1.5, 0.25);
 /// The same for one too wide for that, and wider than a bump in a jet.
 const WIDE_FALL: (f64, f64) = (2.0, 0.15);
+/// A hot spot farther than this many beams from the core stands this many rms, and this share
+/// of its own brightness, above the faintest place of the ridge on its way from the core: bumps
+/// in a jet that fades do not.
+const ROOM_BEAMS: f64 = 2.0;
+const RISE_SIGMA: f64 = 3.0;
+const RISE_SHARE: f64 = 0.2;
 /// At how many places surroundings are compared, and how far from the direction away from the
 /// core a place counts as outward.
 const SURROUNDINGS_PLACES: u32 = 24;
@@ -69,12 +75,12 @@ const SURROUNDINGS_DEG: f64 = 60.0;
 /// Many lobes have no compact spot on the maps we get. Their head counts as the hot spot where
 /// it is the brightest of its side to this share, lies beyond this share of the side, has the
 /// way from the core three times fainter somewhere (the side is edge-brightened), is so wide
-/// that at 1.5 beams a fifth is left around it (a bump in a jet is narrower), and has fallen to
+/// that at 1.5 beams nearly a fifth is left around it (a bump in a jet is narrower), and has fallen to
 /// half two beams outwards (own choice on real survey maps and made plumes).
 const LOBE_BRIGHTNESS: f64 = 0.75;
-const LOBE_PLACE: f64 = 0.6;
+const LOBE_PLACE: f64 = 0.7;
 const LOBE_CONTRAST: f64 = 1.0 / 3.0;
-const LOBE_WIDTH: (f64, f64) = (1.5, 0.2);
+const LOBE_WIDTH: (f64, f64) = (1.5, 0.18);
 const LOBE_FALL: (f64, f64) = (2.0, 0.5);
 /// A fit counts fully where this share of the brightness is shaped as the beam, and not at all
 /// below the other.
@@ -169,7 +175,7 @@ fn hotspot(input: &FeatureInput, ridge: &Ridge, peaks: &[(Peak, SkyOffset)]) -> 
     let highest = outer().map(|p| p.0.value).fold(0.0, f64::max);
     let of_brightness = |least: f64| outer().filter(move |p| p.0.value >= least * highest);
     let (peak, offset) = of_brightness(HOTSPOT_BRIGHTNESS)
-        .find(|p| is_compact_end(input, &p.0, p.1))
+        .find(|p| is_compact_end(input, ridge, &p.0, p.1))
         .or_else(|| of_brightness(LOBE_BRIGHTNESS).find(|p| is_lobe(input, ridge, &p.0, p.1)))?;
     Some(placed(input, ridge, peak, *offset))
 }
@@ -247,12 +253,23 @@ impl Surroundings {
     }
 }
 
-/// Whether a peak is compact and nothing as bright goes on beyond it.
-fn is_compact_end(input: &FeatureInput, peak: &Peak, offset: SkyOffset) -> bool {
+/// Whether a peak is compact, rises from the ridge and nothing as bright goes on beyond it.
+fn is_compact_end(input: &FeatureInput, ridge: &Ridge, peak: &Peak, offset: SkyOffset) -> bool {
     let at = |beams| Surroundings::of(input, peak, offset.position_angle_deg(), beams);
     let near = at(HOTSPOT_FALL.0);
-    near.fallen_to(HOTSPOT_FALL.1)
-        || near.around >= LOBE_WIDTH.1 && at(WIDE_FALL.0).fallen_to(WIDE_FALL.1)
+    let faintest = faintest_inside(input, ridge, peak, offset.radius());
+    let room = offset.radius() > ROOM_BEAMS * input.beam.major;
+    let least_rise = (RISE_SIGMA * near.rms).max(RISE_SHARE) * peak.value;
+    (!room || peak.value - faintest >= least_rise)
+        && (near.fallen_to(HOTSPOT_FALL.1)
+            || near.around >= LOBE_WIDTH.1 && at(WIDE_FALL.0).fallen_to(WIDE_FALL.1))
+}
+
+/// The lowest brightness of a ridge between one beam and a distance from the core, no more than
+/// the peak's.
+fn faintest_inside(input: &FeatureInput, ridge: &Ridge, peak: &Peak, distance: f64) -> f64 {
+    let way = |p: &&RidgePoint| p.distance > input.beam.major && p.distance < distance;
+    ridge.points.iter().filter(way).map(|p| p.brightness).fold(peak.value, f64::min)
 }
 
 /// Whether a peak is the head of a lobe: wider than a jet, falling off beyond it, in the outer
@@ -261,10 +278,8 @@ fn is_compact_end(input: &FeatureInput, peak: &Peak, offset: SkyOffset) -> bool 
 fn is_lobe(input: &FeatureInput, ridge: &Ridge, peak: &Peak, offset: SkyOffset) -> bool {
     let (distance, outward_deg) = (offset.radius(), offset.position_angle_deg());
     let length = ridge.points.last().map_or(0.0, |p| p.distance);
-    let way = |p: &&RidgePoint| p.distance > input.beam.major && p.distance < distance;
-    let faintest = ridge.points.iter().filter(way).map(|p| p.brightness).fold(peak.value, f64::min);
     distance > LOBE_PLACE * length
-        && faintest <= LOBE_CONTRAST * peak.value
+        && faintest_inside(input, ridge, peak, distance) <= LOBE_CONTRAST * peak.value
         && Surroundings::of(input, peak, outward_deg, LOBE_WIDTH.0).around >= LOBE_WIDTH.1
         && Surroundings::of(input, peak, outward_deg, LOBE_FALL.0).outward <= LOBE_FALL.1
 }

@@ -290,6 +290,9 @@ fn share_between(centre: f64, fwhm: f64, from: f64, to: f64) -> f64 {
     normal_probability((to - centre) / sigma) - normal_probability((from - centre) / sigma)
 }
 
+/// A side's crest lies within this of its path, as seen from the core.
+const FARTHEST_CREST_DEG: f64 = 60.0;
+
 impl Truth {
     /// Flux of each side's jet (knots included) inside the strips along its own path, after
     /// the beam, in mJy, in the order of `sides`: what the strips of a noise-free map of the
@@ -357,6 +360,13 @@ impl Truth {
         let circles = ((farthest / step).ceil() as usize).min(4000);
         let start = path.reaching(observation.beam.major).unwrap_or(path.length_arcsec);
         let mut bearing_deg = path.at(start).0.position_angle_deg();
+        // Where nothing of the side shines the way up leads round to the other side.
+        let along: Vec<SkyOffset> =
+            (1..=80).map(|i| path.at(path.length_arcsec * f64::from(i) / 80.0).0).collect();
+        let path_bearing_deg = |radius: f64| {
+            let at = along.iter().find(|offset| offset.radius() >= radius).or(along.last());
+            at.map_or(0.0, |offset| offset.position_angle_deg())
+        };
         let mut points: Vec<CrestPoint> = Vec::new();
         let (mut last, mut previous) = (0, f64::NEG_INFINITY);
         for circle in 1..=circles {
@@ -364,11 +374,17 @@ impl Truth {
             let at = |pa_deg: f64| pieces.brightness(SkyOffset::polar(radius, pa_deg));
             if radius >= observation.beam.major {
                 let fine_deg = (0.04 * beam / radius).to_degrees();
+                let own_deg = path_bearing_deg(radius);
+                if wrap_difference_deg(bearing_deg - own_deg).abs() > FARTHEST_CREST_DEG {
+                    bearing_deg = own_deg;
+                }
                 let mut here = at(bearing_deg);
                 for sign in [-1.0, 1.0] {
                     loop {
                         let next = at(bearing_deg + sign * fine_deg);
-                        if next <= here {
+                        let turn = bearing_deg + sign * fine_deg - own_deg;
+                        let strays = wrap_difference_deg(turn).abs() > FARTHEST_CREST_DEG;
+                        if next <= here || strays {
                             break;
                         }
                         (here, bearing_deg) = (next, bearing_deg + sign * fine_deg);

@@ -74,6 +74,12 @@ impl Sum {
     }
 }
 
+/// The same sum alone, where its error is not asked for.
+pub fn value_where(window: &Window, inside: impl Fn(usize, usize) -> bool) -> f64 {
+    let cells = window.brightness.indexed_iter();
+    cells.filter(|((r, c), _)| window.usable(*r, *c) && inside(*r, *c)).map(|(_, b)| b).sum()
+}
+
 /// Window cells within `grow_px` of the members, neighbours left out.
 pub fn widened(
     window: &Window,

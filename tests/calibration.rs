@@ -9,38 +9,21 @@
 
 use std::collections::BTreeMap;
 
-use jetspan::map::SkyMap;
-use jetspan::map::description::{Layer, Origin, resolve};
-use jetspan::map::read::{Samples, StoredArray};
-use jetspan::pipeline::{MapName, measure};
 use jetspan::record::{MapRecord, Role};
 use jetspan::settings::Settings;
 use jetspan::simulate::{Aperture, Made, MadeMap, Scenario, Truth};
 use jetspan::units::{wrap_difference_deg, wrap_directed_deg};
 use serde_json::Value;
 
+use crate::support::measure_array;
+
 /// The record of a made map, or the code of the reason why it cannot be measured.
 pub fn measured(map: &MadeMap, settings: &Settings) -> Result<MapRecord, &'static str> {
-    let (rows, columns) = map.brightness.dim();
-    let stored = StoredArray {
-        samples: Samples::F32(map.brightness.iter().map(|&v| v as f32).collect()),
-        rows,
-        columns,
-        format: "npy",
-        dtype: "float32".to_owned(),
-        shape: vec![rows as u64, columns as u64],
-        sha256: String::new(),
-    };
     let mut description = map.description.clone();
     if withholds_host() {
         description.retain(|key, _| !key.starts_with("host_"));
     }
-    let text = Value::Object(description).to_string();
-    let layer = Layer::from_json_text(&text, Origin::Sidecar, "made").expect("a description");
-    let description = resolve(vec![layer]).expect("consistent description");
-    let map = SkyMap::from_stored(stored, description).expect("a map");
-    let name = MapName { id: "made".to_owned(), file: "made.npy".to_owned() };
-    measure(&map, &name, settings).map_err(|error| error.code())
+    measure_array(&map.brightness, &Value::Object(description).to_string(), settings)
 }
 
 /// How a quantity is compared.

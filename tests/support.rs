@@ -6,6 +6,12 @@ use std::path::{Path, PathBuf};
 use std::process::{Command, Stdio};
 use std::time::{Duration, Instant};
 
+use jetspan::map::SkyMap;
+use jetspan::map::description::{Layer, Origin, resolve};
+use jetspan::map::read::{Samples, StoredArray};
+use jetspan::pipeline::{MapName, measure};
+use jetspan::record::MapRecord;
+use jetspan::settings::Settings;
 use jetspan::simulate::{
     Amount, GaussianComponent, GaussianShape, NoiseKind, Scene, jet as jet_chain,
 };
@@ -412,4 +418,28 @@ pub fn point_map(columns: usize, rows: usize, peak: f64, seed: u64) -> Array2<f6
         shape: GaussianShape::POINT,
     });
     scene.render()
+}
+
+/// The record of an array in memory with a description as JSON, or the code of the reason why
+/// it cannot be measured.
+pub fn measure_array(
+    array: &Array2<f64>,
+    description: &str,
+    settings: &Settings,
+) -> Result<MapRecord, &'static str> {
+    let (rows, columns) = array.dim();
+    let stored = StoredArray {
+        samples: Samples::F32(array.iter().map(|&v| v as f32).collect()),
+        rows,
+        columns,
+        format: "npy",
+        dtype: "float32".to_owned(),
+        shape: vec![rows as u64, columns as u64],
+        sha256: String::new(),
+    };
+    let layer = Layer::from_json_text(description, Origin::Sidecar, "made").expect("a description");
+    let description = resolve(vec![layer]).expect("consistent description");
+    let map = SkyMap::from_stored(stored, description).expect("a map");
+    let name = MapName { id: "made".to_owned(), file: "made.npy".to_owned() };
+    measure(&map, &name, settings).map_err(|error| error.code())
 }

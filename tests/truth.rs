@@ -1,37 +1,20 @@
 //! Made maps: the truth is known, so bias and error bars can be judged. Seeds are fixed; the
 //! numbers of draws set the tolerances (binomial errors stated beside them).
 
-use jetspan::map::SkyMap;
-use jetspan::map::description::{Layer, Origin, resolve};
-use jetspan::map::read::{Samples, StoredArray};
 use jetspan::measurement::Measurement;
-use jetspan::pipeline::{MapName, measure};
 use jetspan::record::{CoreBasis, MapRecord, Role, Status};
 use jetspan::settings::Settings;
 use jetspan::simulate::{Amount, GaussianComponent, GaussianShape, NoiseKind, Scene, jet};
 
+use crate::support::measure_array;
+
 /// A map in Jy/beam with pixels of 1 arcsec and a round beam, measured with the defaults.
 fn measured(scene: &Scene, more: &str) -> MapRecord {
-    let array = scene.render();
-    let (rows, columns) = array.dim();
-    let stored = StoredArray {
-        samples: Samples::F32(array.iter().map(|&v| v as f32).collect()),
-        rows,
-        columns,
-        format: "npy",
-        dtype: "float32".to_owned(),
-        shape: vec![rows as u64, columns as u64],
-        sha256: String::new(),
-    };
     let text = format!(
         r#"{{"pixel_scale_arcsec": 1.0, "beam_major_arcsec": {}, "unit": "mJy/beam"{more}}}"#,
         scene.beam.major_px
     );
-    let layer = Layer::from_json_text(&text, Origin::Sidecar, "test").expect("valid description");
-    let description = resolve(vec![layer]).expect("consistent description");
-    let map = SkyMap::from_stored(stored, description).expect("a map");
-    let name = MapName { id: "made".to_owned(), file: "made.npy".to_owned() };
-    measure(&map, &name, &Settings::default()).expect("a record")
+    measure_array(&scene.render(), &text, &Settings::default()).expect("a record")
 }
 
 const BEAM_PX: f64 = 5.0;

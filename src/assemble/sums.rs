@@ -2,7 +2,7 @@
 
 use super::Findings;
 use crate::brightness::{FluxPair, ratio};
-use crate::flux::{Sum, beyond_edge, sum_where, widened};
+use crate::flux::{Sum, beyond_edge, sum_where, value_where, widened};
 use crate::measurement::{Because, Measurement};
 use crate::source::sides::{end_offset, side_of};
 use crate::units::SkyOffset;
@@ -48,10 +48,8 @@ pub(super) fn sum_parts(findings: &Findings, order: [usize; 2]) -> Sums {
         let outer = sum_where(&model.window, correlation, background_px, |r, c| {
             inside[[r, c]] && !half[[r, c]] && part(r, c)
         });
-        let inner = sum_where(&model.window, correlation, background_px, |r, c| {
-            half[[r, c]] && !own(r, c) && part(r, c)
-        });
-        beyond_edge(inner.value, &outer)
+        let inner = value_where(&model.window, |r, c| half[[r, c]] && !own(r, c) && part(r, c));
+        beyond_edge(inner, &outer)
     };
     let Some((ridges, features)) = &model.sides else {
         sums.total = sums.total.plus(rest(&|_, _| true));

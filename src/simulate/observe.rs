@@ -244,11 +244,6 @@ impl Canvas {
             }
         }
     }
-
-    /// Where a position on the canvas lies on the array.
-    pub fn on_array(&self, pixel: Pixel) -> Pixel {
-        Pixel::new(pixel.x - self.column_0 as f64, pixel.y - self.row_0 as f64)
-    }
 }
 
 /// Whether a factor leaves everything as it is.

@@ -163,8 +163,6 @@ pub struct TwinSource {
     pub paths: [Path; 2],
     /// Lengths of the two arms along their paths.
     pub arms_arcsec: [f64; 2],
-    /// Where the jets begin and end along their paths.
-    pub jet_from_arcsec: f64,
     /// End of each jet along its path.
     pub jet_to_arcsec: [f64; 2],
     /// Distance, where the scenario gives one.
@@ -310,7 +308,6 @@ pub fn twin_source(
         parts: Vec::new(),
         paths,
         arms_arcsec: arms,
-        jet_from_arcsec: p.jet.start_arcsec,
         jet_to_arcsec: jet_to,
         distance,
         exponent,
